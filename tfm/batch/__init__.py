@@ -1,0 +1,1 @@
+"""Room ``batch`` (being built)."""

@@ -1,0 +1,1 @@
+"""Room ``displacement`` (being built)."""

@@ -1,0 +1,1 @@
+"""Room ``images`` (being built)."""

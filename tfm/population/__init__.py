@@ -1,0 +1,1 @@
+"""Room ``population`` (being built)."""
