@@ -1,1 +1,31 @@
-"""Room ``synth`` (being built)."""
+"""Room ``synth``: the forward model cells -> gel -> beads -> images, for the demo, tests and planning."""
+
+from __future__ import annotations
+
+from tfm.synth.beads import Beads, Camera, expected_photons, make_bead_image, make_beads
+from tfm.synth.cells import SyntheticCell, lattice_axis, make_cell_traction, make_outline
+from tfm.synth.fields import SyntheticField, cell_displacements, make_bead_images, make_field
+from tfm.synth.forward import displacement_at, node_mean, surface_displacement
+from tfm.synth.random_fields import random_cells, random_field, random_gel
+
+__all__ = [
+    "Beads",
+    "Camera",
+    "SyntheticCell",
+    "SyntheticField",
+    "cell_displacements",
+    "displacement_at",
+    "expected_photons",
+    "lattice_axis",
+    "make_bead_image",
+    "make_bead_images",
+    "make_beads",
+    "make_cell_traction",
+    "make_field",
+    "make_outline",
+    "node_mean",
+    "random_cells",
+    "random_field",
+    "random_gel",
+    "surface_displacement",
+]

@@ -1,0 +1,338 @@
+"""Invented adherent cells: an outline, adhesions near its rim, and a traction that balances exactly.
+
+The traction lives on a lattice of square nodes that is finer than any inversion uses, and every true number (dipole,
+force, torque) is a sum over those nodes, so it is exact for the traction that displaces the beads.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from skimage.draw import polygon2mask
+
+from tfm.errors import InputError
+
+__all__ = ["SyntheticCell", "lattice_axis", "make_cell_traction", "make_outline"]
+
+_SHAPES = ("elongated", "spiky", "kidney")
+
+
+@dataclass(frozen=True)
+class SyntheticCell:
+    """One invented cell with the numbers that are true of it. SI units.
+
+    Attributes
+    ----------
+    traction
+        ``(2, ny, nx)`` Pa on square nodes of edge ``spacing``; force per area that the cell applies to the gel.
+    mask
+        ``(rows, columns)`` bool on the image's pixels: inside the outline.
+    polygon
+        ``(n, 2)`` pixel coordinates x, y of the outline.
+    spacing
+        m, edge of a node. Node ``i`` of an axis is centred at ``(i + 1/2) spacing - pixel_size / 2``.
+    pixel_size
+        m.
+    centroid
+        ``(2,)`` m, x and y of the mask's centroid.
+    dipole
+        ``(3,)`` N m: xx, xy, yy of the symmetric first moment of the traction.
+    adhesions
+        ``(k, 4)``: x, y (m) and force x, y (N) of every adhesion before balancing; for figures only.
+    """
+
+    traction: NDArray[np.float64]
+    mask: NDArray[np.bool_]
+    polygon: NDArray[np.float64]
+    spacing: float
+    pixel_size: float
+    centroid: NDArray[np.float64]
+    dipole: NDArray[np.float64]
+    adhesions: NDArray[np.float64]
+
+    @property
+    def contractile_moment(self) -> float:
+        """N m, ``-(P_xx + P_yy)``: positive when the cell pulls inwards."""
+        return float(-(self.dipole[0] + self.dipole[2]))
+
+
+def lattice_axis(pixels: int, pixel_size: float, spacing_px: float) -> NDArray[np.float64]:
+    """Centres (m) of the square nodes along an axis of ``pixels`` pixels.
+
+    Raises
+    ------
+    InputError
+        When the nodes do not fill the axis exactly.
+
+    Examples
+    --------
+    >>> lattice_axis(2, 1.0, 0.5)
+    array([-0.25,  0.25,  0.75,  1.25])
+    """
+    count = round(pixels / spacing_px)
+    if abs(count * spacing_px - pixels) > 1e-9 * pixels:
+        raise InputError(
+            f"nodes of {spacing_px} px do not fill {pixels} px", code="bad-spacing", remedy="choose 1, 0.5 or 0.25"
+        )
+    return ((np.arange(count) + 0.5) * spacing_px - 0.5) * pixel_size
+
+
+def make_outline(
+    length: float, width: float, angle: float, rng: np.random.Generator, *, kind: str = "random", points: int = 360
+) -> NDArray[np.float64]:
+    """A closed random outline around the origin, ``(points, 2)`` x, y in the unit of ``length``.
+
+    An ellipse whose radius carries a few random low harmonics; ``spiky`` adds three to six narrow lobes, ``kidney`` bends
+    the long axis, ``elongated`` sharpens the two ends.
+
+    Raises
+    ------
+    InputError
+        For an unknown ``kind`` or a size that is not positive.
+
+    Examples
+    --------
+    >>> make_outline(40.0, 15.0, 0.0, np.random.default_rng(1)).shape
+    (360, 2)
+    """
+    if kind == "random":
+        kind = str(rng.choice(_SHAPES))
+    if kind not in _SHAPES:
+        raise InputError(f"shape '{kind}' is unknown", code="bad-shape", remedy=f"choose one of {', '.join(_SHAPES)}")
+    if not (length > 0 and width > 0):
+        raise InputError("length and width of a cell must be positive", code="bad-size", remedy="give both in m")
+    phi = np.linspace(0, 2 * np.pi, points, endpoint=False)
+    radius = np.ones_like(phi)
+    for order in range(2, 6):
+        radius += 0.12 / order * rng.normal() * np.cos(order * phi - rng.uniform(0, 2 * np.pi))
+    if kind == "spiky":
+        for centre in rng.uniform(0, 2 * np.pi, int(rng.integers(3, 7))):
+            radius += rng.uniform(0.15, 0.4) * np.exp(8.0 * (np.cos(phi - centre) - 1))
+    if kind == "elongated":
+        radius *= 0.85 + 0.3 * np.abs(np.cos(phi)) ** 3
+    radius = np.clip(radius, 0.45, 1.6)
+    x, y = 0.5 * length * radius * np.cos(phi), 0.5 * width * radius * np.sin(phi)
+    if kind == "kidney":
+        y = y + rng.choice([-1.0, 1.0]) * rng.uniform(0.25, 0.5) * width * ((2 * x / length) ** 2 - 0.4)
+    turn = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
+    outline: NDArray[np.float64] = np.stack([x, y], axis=1) @ turn.T
+    return outline
+
+
+def make_cell_traction(
+    shape_px: tuple[int, int],
+    pixel_size: float,
+    *,
+    centre: tuple[float, float],
+    length: float,
+    width: float,
+    angle: float,
+    contractile_moment: float,
+    rng: np.random.Generator,
+    anisotropy: float = 0.5,
+    polarity: float = 0.0,
+    adhesions: int | None = None,
+    kind: str = "random",
+    spacing_px: float = 1.0,
+) -> SyntheticCell:
+    """A random adherent cell whose traction has the asked contractile moment and balances to rounding.
+
+    Parameters
+    ----------
+    shape_px
+        Rows and columns of the image.
+    pixel_size
+        m.
+    centre
+        x, y in m of the middle of the cell, in the image's frame (origin at the centre of pixel (0, 0), y down).
+    length, width, angle
+        m, m and rad (from +x towards +y): size and direction of the outline.
+    contractile_moment
+        N m, ``-(P_xx + P_yy)``; positive pulls inwards.
+    rng
+        Source of randomness.
+    anisotropy
+        0 = adhesions pull with equal strength in all directions, 1 = along the long axis only.
+    polarity
+        -1..1: share of adhesions and pull moved to one end of the cell.
+    adhesions
+        Number of adhesions; random 14-30 when not given.
+    kind
+        ``elongated``, ``spiky``, ``kidney`` or ``random``.
+    spacing_px
+        Edge of the lattice's nodes in pixels (1, 0.5, ...).
+
+    Returns
+    -------
+    SyntheticCell
+        Adhesions are elliptical patches of 1-8 um^2 with a smooth profile, 1-3 um inside the rim.
+
+    Raises
+    ------
+    InputError
+        When the cell does not lie inside the image.
+
+    Examples
+    --------
+    >>> cell = make_cell_traction((128, 128), 4e-7, centre=(25e-6, 25e-6), length=30e-6, width=15e-6, angle=0.3,
+    ...                           contractile_moment=1e-12, rng=np.random.default_rng(3))
+    >>> round(cell.contractile_moment * 1e12, 9)
+    1.0
+    """
+    polygon = (make_outline(length, width, angle, rng, kind=kind) + np.asarray(centre)) / pixel_size
+    mask = np.asarray(polygon2mask(shape_px, polygon[:, ::-1]), dtype=bool)
+    low, high = polygon.min(axis=0), polygon.max(axis=0)
+    if not mask.any() or (low < -0.5).any() or high[0] > shape_px[1] - 0.5 or high[1] > shape_px[0] - 0.5:
+        raise InputError(
+            f"the cell at {centre[0] * 1e6:.1f}, {centre[1] * 1e6:.1f} um reaches outside the image",
+            code="cell-outside",
+            remedy="move it or make it smaller",
+        )
+    rows, columns = np.nonzero(mask)
+    centroid = np.array([columns.mean(), rows.mean()]) * pixel_size
+    x = lattice_axis(shape_px[1], pixel_size, spacing_px)
+    y = lattice_axis(shape_px[0], pixel_size, spacing_px)
+    spacing = spacing_px * pixel_size
+    inside = mask[np.rint(y / pixel_size).astype(int).clip(0)][:, np.rint(x / pixel_size).astype(int).clip(0)]
+    count = int(rng.integers(14, 31)) if adhesions is None else adhesions
+    places = _adhesion_places(polygon * pixel_size, centroid, angle, count, polarity, rng)
+    forces = _adhesion_forces(places, centroid, angle, anisotropy, polarity, rng)
+    traction, weight, forces = _patches(x, y, inside, places, forces, centroid, rng)
+    traction = _balanced(traction, weight, x, y)
+    dipole = _dipole(traction, x, y, centroid, spacing)
+    scale = contractile_moment / -(dipole[0] + dipole[2])
+    return SyntheticCell(
+        traction=traction * scale,
+        mask=mask,
+        polygon=polygon,
+        spacing=spacing,
+        pixel_size=pixel_size,
+        centroid=centroid,
+        dipole=dipole * scale,
+        adhesions=np.hstack([places, forces * scale * spacing**2]),
+    )
+
+
+def _adhesion_places(
+    rim: NDArray[np.float64],
+    centroid: NDArray[np.float64],
+    angle: float,
+    count: int,
+    polarity: float,
+    rng: np.random.Generator,
+) -> NDArray[np.float64]:
+    """``(count, 2)`` m: places 1-3 um inside the rim, more of them towards the two ends."""
+    arm = rim - centroid
+    along = arm @ np.array([np.cos(angle), np.sin(angle)])
+    along = along / np.abs(along).max()
+    step = np.linalg.norm(np.roll(rim, -1, axis=0) - rim, axis=1)
+    weight = step * (0.25 + np.abs(along) ** 2) * np.clip(1 + polarity * np.sign(along), 0.1, None)
+    # One draw in every count-th part of the weight: adhesions spread along the rim instead of piling up.
+    cumulative = np.cumsum(weight) / weight.sum()
+    chosen = np.searchsorted(cumulative, (np.arange(count) + rng.uniform(0.1, 0.9, count)) / count).clip(0, len(rim) - 1)
+    distance = np.linalg.norm(arm[chosen], axis=1)
+    inward = np.minimum(rng.uniform(1.0e-6, 3.0e-6, count) / distance, 0.45)
+    places: NDArray[np.float64] = rim[chosen] - arm[chosen] * inward[:, None]
+    return places
+
+
+def _adhesion_forces(
+    places: NDArray[np.float64],
+    centroid: NDArray[np.float64],
+    angle: float,
+    anisotropy: float,
+    polarity: float,
+    rng: np.random.Generator,
+) -> NDArray[np.float64]:
+    """``(count, 2)`` relative forces, roughly inwards, unequal in size."""
+    arm = places - centroid
+    axis = np.array([np.cos(angle), np.sin(angle)])
+    across = np.array([-axis[1], axis[0]])
+    inward = -arm / np.linalg.norm(arm, axis=1, keepdims=True)
+    turn = rng.normal(0, 0.25, len(places))
+    cosine, sine = np.cos(turn)[:, None], np.sin(turn)[:, None]
+    inward = inward * cosine + np.stack([-inward[:, 1], inward[:, 0]], axis=1) * sine
+    pull = (inward @ axis)[:, None] * axis + (1 - anisotropy) * (inward @ across)[:, None] * across
+    size = rng.lognormal(0.0, 0.3, len(places)) * (0.5 + np.linalg.norm(arm, axis=1) / np.linalg.norm(arm, axis=1).max())
+    size = size * np.clip(1 + 0.5 * polarity * np.sign(arm @ axis), 0.1, None)
+    forces: NDArray[np.float64] = pull * size[:, None]
+    return forces
+
+
+def _patches(
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    inside: NDArray[np.bool_],
+    places: NDArray[np.float64],
+    forces: NDArray[np.float64],
+    centroid: NDArray[np.float64],
+    rng: np.random.Generator,
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Every adhesion's force spread over an elliptical patch that points at the cell's middle; sum, weight, forces."""
+    applied = np.zeros_like(forces)
+    traction = np.zeros((2, len(y), len(x)))
+    weight = np.zeros((len(y), len(x)))
+    areas = rng.uniform(1.0e-12, 8.0e-12, len(places))
+    for number, ((px, py), pull, area) in enumerate(zip(places, forces, areas, strict=True)):
+        # A larger adhesion carries more force: the stress on it, not the force, is what cells keep alike (common practice).
+        force, stretch = pull * area, rng.uniform(1.2, 2.5)
+        # The profile (1 - r^2)^2 reaches zero smoothly; its edge lies at 1.5 times the radius of the quoted area.
+        minor = 1.5 * np.sqrt(area / (np.pi * stretch))
+        major = minor * stretch
+        theta = np.arctan2(py - centroid[1], px - centroid[0])
+        cols = np.flatnonzero(np.abs(x - px) <= major)
+        rows = np.flatnonzero(np.abs(y - py) <= major)
+        if not (len(cols) and len(rows)):
+            continue
+        dx, dy = x[cols][None, :] - px, y[rows][:, None] - py
+        r2 = ((dx * np.cos(theta) + dy * np.sin(theta)) / major) ** 2 + (
+            (dy * np.cos(theta) - dx * np.sin(theta)) / minor
+        ) ** 2
+        profile = np.where(r2 < 1, (1 - r2) ** 2, 0.0) * inside[np.ix_(rows, cols)]
+        total = profile.sum()
+        if total <= 0:
+            continue
+        applied[number] = force
+        block = np.ix_(rows, cols)
+        weight[block] += profile / total * np.linalg.norm(force)
+        for component in range(2):
+            traction[component][block] += profile / total * force[component]
+    return traction, weight, applied
+
+
+def _balanced(
+    traction: NDArray[np.float64], weight: NDArray[np.float64], x: NDArray[np.float64], y: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """The traction with net force and torque taken out, changed only where adhesions are (in proportion to pull)."""
+    share = weight / weight.sum()
+    cx, cy = float((share * x[None, :]).sum()), float((share * y[:, None]).sum())
+    dx, dy = np.broadcast_to(x[None, :] - cx, weight.shape), np.broadcast_to(y[:, None] - cy, weight.shape)
+    out = traction
+    for _ in range(3):  # the second and third pass only remove rounding
+        out = out - share * out.sum(axis=(1, 2))[:, None, None]
+        torque = float((dx * out[1] - dy * out[0]).sum())
+        swirl = np.stack([-dy * share, dx * share])
+        out = out - swirl * torque / float((share * (dx**2 + dy**2)).sum())
+    return out
+
+
+def _dipole(
+    traction: NDArray[np.float64],
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    centroid: NDArray[np.float64],
+    spacing: float,
+) -> NDArray[np.float64]:
+    """xx, xy, yy of the symmetric first moment; exact, because a uniform square has its first moment at its centre."""
+    dx, dy = x[None, :] - centroid[0], y[:, None] - centroid[1]
+    area: Any = spacing**2
+    return np.array(
+        [
+            (dx * traction[0]).sum() * area,
+            0.5 * ((dx * traction[1]).sum() + (dy * traction[0]).sum()) * area,
+            (dy * traction[1]).sum() * area,
+        ]
+    )
