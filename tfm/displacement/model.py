@@ -19,8 +19,8 @@ class DisplacementField:
     Attributes
     ----------
     x, y
-        ``(nx,)`` and ``(ny,)`` m. Grid positions **in the relaxed image's frame**; x right, y down, origin at the centre
-        of pixel (0, 0).
+        ``(nx,)`` and ``(ny,)`` m. Grid positions **in the relaxed image's frame**; x right, y down, origin at the
+        centre of pixel (0, 0).
     u
         ``(2, ny, nx)`` m, component 0 = x. NaN where ``valid`` is False: no vector is ever invented.
     precision
