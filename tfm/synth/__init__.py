@@ -4,11 +4,13 @@ from __future__ import annotations
 
 from tfm.synth.beads import Beads, Camera, expected_photons, make_bead_image, make_beads
 from tfm.synth.cells import SyntheticCell, lattice_axis, make_cell_traction, make_outline
+from tfm.synth.demo import DEMO_SEED, write_demo
 from tfm.synth.fields import SyntheticField, cell_displacements, make_bead_images, make_field
 from tfm.synth.forward import displacement_at, node_mean, surface_displacement
 from tfm.synth.random_fields import random_cells, random_field, random_gel
 
 __all__ = [
+    "DEMO_SEED",
     "Beads",
     "Camera",
     "SyntheticCell",
@@ -28,4 +30,5 @@ __all__ = [
     "random_field",
     "random_gel",
     "surface_displacement",
+    "write_demo",
 ]

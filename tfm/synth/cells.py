@@ -11,11 +11,12 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from skimage.draw import polygon2mask
+from skimage import draw
 
 from tfm.errors import InputError
+from tfm.synth.adhesions import adhesion_forces, adhesion_places, balanced, patches
 
-__all__ = ["SyntheticCell", "lattice_axis", "make_cell_traction", "make_outline"]
+__all__ = ["SyntheticCell", "lattice_axis", "make_cell_traction", "make_outline", "polygon_mask"]
 
 _SHAPES = ("elongated", "spiky", "kidney")
 
@@ -77,7 +78,8 @@ def lattice_axis(pixels: int, pixel_size: float, spacing_px: float) -> NDArray[n
         raise InputError(
             f"nodes of {spacing_px} px do not fill {pixels} px", code="bad-spacing", remedy="choose 1, 0.5 or 0.25"
         )
-    return ((np.arange(count) + 0.5) * spacing_px - 0.5) * pixel_size
+    centres: NDArray[np.float64] = ((np.arange(count, dtype=np.float64) + 0.5) * spacing_px - 0.5) * pixel_size
+    return centres
 
 
 def make_outline(
@@ -85,8 +87,8 @@ def make_outline(
 ) -> NDArray[np.float64]:
     """A closed random outline around the origin, ``(points, 2)`` x, y in the unit of ``length``.
 
-    An ellipse whose radius carries a few random low harmonics; ``spiky`` adds three to six narrow lobes, ``kidney`` bends
-    the long axis, ``elongated`` sharpens the two ends.
+    An ellipse whose radius carries a few random low harmonics; ``spiky`` adds three to six narrow lobes, ``kidney``
+    bends the long axis, ``elongated`` sharpens the two ends.
 
     Raises
     ------
@@ -120,6 +122,14 @@ def make_outline(
     turn = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
     outline: NDArray[np.float64] = np.stack([x, y], axis=1) @ turn.T
     return outline
+
+
+def polygon_mask(shape_px: tuple[int, int], polygon: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """Pixels whose centre lies inside ``polygon`` (x, y in pixels)."""
+    mask = np.zeros(shape_px, dtype=np.bool_)
+    fill: Any = draw.polygon  # the library ships no types for it
+    mask[fill(polygon[:, 1], polygon[:, 0], shape_px)] = True
+    return mask
 
 
 def make_cell_traction(
@@ -183,7 +193,7 @@ def make_cell_traction(
     1.0
     """
     polygon = (make_outline(length, width, angle, rng, kind=kind) + np.asarray(centre)) / pixel_size
-    mask = np.asarray(polygon2mask(shape_px, polygon[:, ::-1]), dtype=bool)
+    mask = polygon_mask(shape_px, polygon)
     low, high = polygon.min(axis=0), polygon.max(axis=0)
     if not mask.any() or (low < -0.5).any() or high[0] > shape_px[1] - 0.5 or high[1] > shape_px[0] - 0.5:
         raise InputError(
@@ -198,10 +208,10 @@ def make_cell_traction(
     spacing = spacing_px * pixel_size
     inside = mask[np.rint(y / pixel_size).astype(int).clip(0)][:, np.rint(x / pixel_size).astype(int).clip(0)]
     count = int(rng.integers(14, 31)) if adhesions is None else adhesions
-    places = _adhesion_places(polygon * pixel_size, centroid, angle, count, polarity, rng)
-    forces = _adhesion_forces(places, centroid, angle, anisotropy, polarity, rng)
-    traction, weight, forces = _patches(x, y, inside, places, forces, centroid, rng)
-    traction = _balanced(traction, weight, x, y)
+    places = adhesion_places(polygon * pixel_size, centroid, angle, count, polarity, rng)
+    forces = adhesion_forces(places, centroid, angle, anisotropy, polarity, rng)
+    traction, weight, forces = patches(x, y, inside, places, forces, centroid, rng)
+    traction = balanced(traction, weight, x, y)
     dipole = _dipole(traction, x, y, centroid, spacing)
     scale = contractile_moment / -(dipole[0] + dipole[2])
     return SyntheticCell(
@@ -216,109 +226,6 @@ def make_cell_traction(
     )
 
 
-def _adhesion_places(
-    rim: NDArray[np.float64],
-    centroid: NDArray[np.float64],
-    angle: float,
-    count: int,
-    polarity: float,
-    rng: np.random.Generator,
-) -> NDArray[np.float64]:
-    """``(count, 2)`` m: places 1-3 um inside the rim, more of them towards the two ends."""
-    arm = rim - centroid
-    along = arm @ np.array([np.cos(angle), np.sin(angle)])
-    along = along / np.abs(along).max()
-    step = np.linalg.norm(np.roll(rim, -1, axis=0) - rim, axis=1)
-    weight = step * (0.25 + np.abs(along) ** 2) * np.clip(1 + polarity * np.sign(along), 0.1, None)
-    # One draw in every count-th part of the weight: adhesions spread along the rim instead of piling up.
-    cumulative = np.cumsum(weight) / weight.sum()
-    chosen = np.searchsorted(cumulative, (np.arange(count) + rng.uniform(0.1, 0.9, count)) / count).clip(0, len(rim) - 1)
-    distance = np.linalg.norm(arm[chosen], axis=1)
-    inward = np.minimum(rng.uniform(1.0e-6, 3.0e-6, count) / distance, 0.45)
-    places: NDArray[np.float64] = rim[chosen] - arm[chosen] * inward[:, None]
-    return places
-
-
-def _adhesion_forces(
-    places: NDArray[np.float64],
-    centroid: NDArray[np.float64],
-    angle: float,
-    anisotropy: float,
-    polarity: float,
-    rng: np.random.Generator,
-) -> NDArray[np.float64]:
-    """``(count, 2)`` relative forces, roughly inwards, unequal in size."""
-    arm = places - centroid
-    axis = np.array([np.cos(angle), np.sin(angle)])
-    across = np.array([-axis[1], axis[0]])
-    inward = -arm / np.linalg.norm(arm, axis=1, keepdims=True)
-    turn = rng.normal(0, 0.25, len(places))
-    cosine, sine = np.cos(turn)[:, None], np.sin(turn)[:, None]
-    inward = inward * cosine + np.stack([-inward[:, 1], inward[:, 0]], axis=1) * sine
-    pull = (inward @ axis)[:, None] * axis + (1 - anisotropy) * (inward @ across)[:, None] * across
-    size = rng.lognormal(0.0, 0.3, len(places)) * (0.5 + np.linalg.norm(arm, axis=1) / np.linalg.norm(arm, axis=1).max())
-    size = size * np.clip(1 + 0.5 * polarity * np.sign(arm @ axis), 0.1, None)
-    forces: NDArray[np.float64] = pull * size[:, None]
-    return forces
-
-
-def _patches(
-    x: NDArray[np.float64],
-    y: NDArray[np.float64],
-    inside: NDArray[np.bool_],
-    places: NDArray[np.float64],
-    forces: NDArray[np.float64],
-    centroid: NDArray[np.float64],
-    rng: np.random.Generator,
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """Every adhesion's force spread over an elliptical patch that points at the cell's middle; sum, weight, forces."""
-    applied = np.zeros_like(forces)
-    traction = np.zeros((2, len(y), len(x)))
-    weight = np.zeros((len(y), len(x)))
-    areas = rng.uniform(1.0e-12, 8.0e-12, len(places))
-    for number, ((px, py), pull, area) in enumerate(zip(places, forces, areas, strict=True)):
-        # A larger adhesion carries more force: the stress on it, not the force, is what cells keep alike (common practice).
-        force, stretch = pull * area, rng.uniform(1.2, 2.5)
-        # The profile (1 - r^2)^2 reaches zero smoothly; its edge lies at 1.5 times the radius of the quoted area.
-        minor = 1.5 * np.sqrt(area / (np.pi * stretch))
-        major = minor * stretch
-        theta = np.arctan2(py - centroid[1], px - centroid[0])
-        cols = np.flatnonzero(np.abs(x - px) <= major)
-        rows = np.flatnonzero(np.abs(y - py) <= major)
-        if not (len(cols) and len(rows)):
-            continue
-        dx, dy = x[cols][None, :] - px, y[rows][:, None] - py
-        r2 = ((dx * np.cos(theta) + dy * np.sin(theta)) / major) ** 2 + (
-            (dy * np.cos(theta) - dx * np.sin(theta)) / minor
-        ) ** 2
-        profile = np.where(r2 < 1, (1 - r2) ** 2, 0.0) * inside[np.ix_(rows, cols)]
-        total = profile.sum()
-        if total <= 0:
-            continue
-        applied[number] = force
-        block = np.ix_(rows, cols)
-        weight[block] += profile / total * np.linalg.norm(force)
-        for component in range(2):
-            traction[component][block] += profile / total * force[component]
-    return traction, weight, applied
-
-
-def _balanced(
-    traction: NDArray[np.float64], weight: NDArray[np.float64], x: NDArray[np.float64], y: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    """The traction with net force and torque taken out, changed only where adhesions are (in proportion to pull)."""
-    share = weight / weight.sum()
-    cx, cy = float((share * x[None, :]).sum()), float((share * y[:, None]).sum())
-    dx, dy = np.broadcast_to(x[None, :] - cx, weight.shape), np.broadcast_to(y[:, None] - cy, weight.shape)
-    out = traction
-    for _ in range(3):  # the second and third pass only remove rounding
-        out = out - share * out.sum(axis=(1, 2))[:, None, None]
-        torque = float((dx * out[1] - dy * out[0]).sum())
-        swirl = np.stack([-dy * share, dx * share])
-        out = out - swirl * torque / float((share * (dx**2 + dy**2)).sum())
-    return out
-
-
 def _dipole(
     traction: NDArray[np.float64],
     x: NDArray[np.float64],
@@ -328,7 +235,7 @@ def _dipole(
 ) -> NDArray[np.float64]:
     """xx, xy, yy of the symmetric first moment; exact, because a uniform square has its first moment at its centre."""
     dx, dy = x[None, :] - centroid[0], y[:, None] - centroid[1]
-    area: Any = spacing**2
+    area = spacing**2
     return np.array(
         [
             (dx * traction[0]).sum() * area,

@@ -51,7 +51,11 @@ def node_mean(u: NDArray[np.float64]) -> NDArray[np.float64]:
     """
     padded = np.pad(u, ((0, 0), (1, 1), (1, 1)), mode="edge")
     laplacian = (
-        padded[:, 2:, 1:-1] + padded[:, :-2, 1:-1] + padded[:, 1:-1, 2:] + padded[:, 1:-1, :-2] - 4 * padded[:, 1:-1, 1:-1]
+        padded[:, 2:, 1:-1]
+        + padded[:, :-2, 1:-1]
+        + padded[:, 1:-1, 2:]
+        + padded[:, 1:-1, :-2]
+        - 4 * padded[:, 1:-1, 1:-1]
     )
     out: NDArray[np.float64] = u + laplacian / 24
     return out

@@ -102,7 +102,7 @@ def random_field(
     density_per_px2: float | None = None,
     photons: float | None = None,
     drift: bool = True,
-    **imperfections: float,
+    **imperfections: Any,
 ) -> SyntheticField:
     """A random field: whatever is not given is drawn.
 
