@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -21,12 +22,15 @@ class Outlines:
     source
         ``label image``, ``polygons``, ``roi``, ``automatic`` or ``proposed from displacement``.
     notes
-        Sentences for the table (for instance that an outline is a proposal, so ``caution``).
+        Sentences for the table that concern all cells (for instance that an outline is a proposal, so ``caution``).
+    cell_notes
+        Sentences for the table that concern one cell, by its number.
     """
 
     labels: NDArray[np.int32]
     source: str
     notes: tuple[str, ...] = field(default=())
+    cell_notes: Mapping[int, tuple[str, ...]] = field(default_factory=dict)
 
     @property
     def cells(self) -> tuple[int, ...]:
