@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tfm.gel import Gel
+from tfm.traction.gaussian import LinearData, Solution
 
 __all__ = ["Posterior", "TractionField"]
 
@@ -76,6 +77,11 @@ class TractionField:
         Iterations, prior strength, lambda and its unit, evidence, node spacing, seconds: for run.json.
     notes
         Sentences for the table; any note makes ``caution``.
+    dipole_covariance, energy_sd
+        For ``fourier``: noise propagated to every cell's dipole, ``(3, 3)`` (N m)^2 by label, and strain energy, J.
+    data, solution
+        The linearised problem and its solution, so that other gels can be tried on the same beads
+        (:func:`tfm.traction.solve`); None for ``fourier``.
     """
 
     x: NDArray[np.float64]
@@ -91,3 +97,7 @@ class TractionField:
     misfit: float
     statistics: Mapping[str, Any] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+    dipole_covariance: Mapping[int, NDArray[np.float64]] = field(default_factory=dict)
+    energy_sd: Mapping[int, float] = field(default_factory=dict)
+    data: LinearData | None = None
+    solution: Solution | None = None

@@ -1,0 +1,332 @@
+r"""Gaussian posterior of the traction and its evidence, for data that are displacements with known precision.
+
+Model: :math:`d = G W c + Z o + e`, :math:`e \sim N(0, P^{-1})`; *c* node coefficients with the prior of
+:mod:`tfm.traction.prior`, *o* offset of the frame (flat prior), balance :math:`B c = 0` exactly. Posterior and evidence are
+those of the linear Gaussian model (Rasmussen & Williams 2006, sec. 2.2; MacKay, Neural Computation 4:415, 1992); the balance
+is imposed by conditioning: :math:`p(d \mid Bc=0) = p(d)\,p(Bc=0 \mid d)/p(Bc=0)`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import linalg
+
+from tfm.errors import ConvergenceError
+from tfm.gel import Gel, node_kernel
+from tfm.traction.lattice import Lattice, NodeBasis
+from tfm.traction.prior import CellPrior, first_moments, make_prior
+
+__all__ = ["LinearData", "NormalEquations", "Solution", "balance_rows", "best_posterior", "normal_equations", "posterior"]
+
+
+@dataclass(frozen=True)
+class LinearData:
+    """Displacements at points of the lattice, and everything needed to ask how well a gel explains them.
+
+    Attributes
+    ----------
+    lattice, basis
+        Where traction lives.
+    rows, columns
+        ``(N,)`` data positions in lattice units (fractions are interpolated bilinearly in the kernel).
+    value
+        ``(2, N)`` m.
+    precision
+        ``(3, N)`` 1/m^2: xx, xy, yy of each datum's inverse covariance.
+    groups
+        Labels that balance together; a group that is cut by the image's edge is absent.
+    nuisance
+        Which motions of the stressed frame are estimated: ``offset`` (always), ``rotation``, ``scale``.
+    """
+
+    lattice: Lattice
+    basis: NodeBasis
+    rows: NDArray[np.float64]
+    columns: NDArray[np.float64]
+    value: NDArray[np.float64]
+    precision: NDArray[np.float64]
+    groups: tuple[tuple[int, ...], ...]
+    nuisance: tuple[str, ...] = ("offset",)
+
+
+@dataclass(frozen=True)
+class NormalEquations:
+    """Sufficient statistics with the nuisance motions eliminated.
+
+    ``information`` ``(2 n, 2 n)`` 1/Pa^2, ``score`` ``(2 n,)`` 1/Pa, ``energy`` = weighted sum of squares left when the
+    traction is 0, ``balance`` ``(n_b, 2 n)``; ``response`` ``(2 N, 2 n)`` m/Pa maps coefficients to data, ``motions``
+    ``(2 N, k)`` the frame's motions; ``motion_solver`` ``(k, 1 + 2 n)`` gives the motions that go with coefficients ``c`` as
+    ``motion_solver @ [1, c]``; ``count`` = number of data less the motions.
+    """
+
+    information: NDArray[np.float64]
+    score: NDArray[np.float64]
+    energy: float
+    balance: NDArray[np.float64]
+    response: NDArray[np.float64]
+    motions: NDArray[np.float64]
+    motion_solver: NDArray[np.float64]
+    count: int
+
+
+@dataclass(frozen=True)
+class Solution:
+    """Posterior at one prior.
+
+    Attributes
+    ----------
+    mean, covariance
+        ``(2 n,)`` Pa and ``(2 n, 2 n)`` Pa^2.
+    nuisance
+        Estimated offset (m), rotation (rad) and scale.
+    log_evidence
+        Natural logarithm, up to a constant that depends on data and outlines but not on gel, amplitude or length.
+    amplitudes, length
+        Pa for each cell (order of ``np.unique(labels)``), m.
+    chi_square, degrees
+        Misfit and its expectation.
+    iterations
+        Of the prior's strength.
+    """
+
+    mean: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    nuisance: NDArray[np.float64]
+    log_evidence: float
+    amplitudes: NDArray[np.float64]
+    length: float
+    chi_square: float
+    degrees: float
+    iterations: int = 0
+    profile: tuple[tuple[float, float], ...] = ()
+
+
+def _shifted(kernel: NDArray[np.float64], fr: float, fc: float) -> NDArray[np.float64]:
+    """Kernel at lattice offsets plus a fraction, by bilinear interpolation."""
+    if fr:
+        kernel = (1 - fr) * kernel + fr * np.concatenate([kernel[:, 1:], kernel[:, -1:]], axis=1)
+    if fc:
+        kernel = (1 - fc) * kernel + fc * np.concatenate([kernel[:, :, 1:], kernel[:, :, -1:]], axis=2)
+    return kernel
+
+
+def response_matrix(data: LinearData, kernel: NDArray[np.float64]) -> NDArray[np.float64]:
+    """``(2 N, 2 n)`` m/Pa: displacement of every datum (all x, then all y) for every coefficient."""
+    basis, shape = data.basis, data.lattice.shape
+    n_data, n = data.rows.size, basis.size
+    result = np.empty((2 * n_data, 2 * n))
+    base_r, base_c = np.floor(data.rows).astype(np.intp), np.floor(data.columns).astype(np.intp)
+    frac = np.stack([data.rows - base_r, data.columns - base_c]).round(6)
+    weights_t = basis.weights.T.tocsr()
+    width = kernel.shape[2]
+    for fr, fc in np.unique(frac, axis=1).T:
+        members = np.nonzero((frac[0] == fr) & (frac[1] == fc))[0]
+        flat = np.ascontiguousarray(_shifted(kernel, float(fr), float(fc))).reshape(3, -1)
+        # Chunks keep the gathered table small: 4e6 elements are 32 MB.
+        chunk = max(1, int(4e6 / basis.rows.size))
+        for start in range(0, members.size, chunk):
+            part = members[start : start + chunk]
+            where = (base_r[part][None, :] - basis.rows[:, None] + shape[0] - 1) * width + (
+                base_c[part][None, :] - basis.columns[:, None] + shape[1] - 1
+            )
+            xx, xy, yy = (np.asarray(weights_t @ flat[i][where]).T for i in range(3))
+            result[part, :n], result[part, n:] = xx, xy
+            result[part + n_data, :n], result[part + n_data, n:] = xy, yy
+    return result
+
+
+def nuisance_columns(data: LinearData) -> NDArray[np.float64]:
+    """``(2 N, k)``: displacement of the data for unit offset x, offset y and, on request, rotation and scale."""
+    n = data.rows.size
+    one, zero = np.ones(n), np.zeros(n)
+    # Rotation and scale act about the middle of the lattice, so that they stay nearly independent of the offset.
+    x = (data.columns - 0.5 * (data.lattice.shape[1] - 1)) * data.lattice.spacing
+    y = (data.rows - 0.5 * (data.lattice.shape[0] - 1)) * data.lattice.spacing
+    columns = [np.concatenate([one, zero]), np.concatenate([zero, one])]
+    if "rotation" in data.nuisance:
+        columns.append(np.concatenate([-y, x]))
+    if "scale" in data.nuisance:
+        columns.append(np.concatenate([x, y]))
+    return np.stack(columns, axis=1)
+
+
+def _weigh(precision: NDArray[np.float64], block: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Multiply ``(2 N, ...)`` (all x, then all y) by the 2 x 2 precisions.
+
+    No square root is taken: a patch without a bead may carry a slightly indefinite precision, because the product of two
+    noisy gradients scatters around zero; clipping it would bias the sum.
+    """
+    n = precision.shape[1]
+    tail = (slice(None),) + (None,) * (block.ndim - 1)
+    pxx, pxy, pyy = (precision[i][tail] for i in range(3))
+    return np.concatenate([pxx * block[:n] + pxy * block[n:], pxy * block[:n] + pyy * block[n:]])
+
+
+def balance_rows(
+    basis: NodeBasis, lattice: Lattice, groups: Sequence[Sequence[int]]
+) -> NDArray[np.float64]:
+    """``(3 n_groups, 2 n)``: net force x, y and torque of each group, scaled to rows of unit length."""
+    n, area = basis.size, lattice.spacing**2
+    rows = []
+    for group in groups:
+        cells = np.isin(basis.labels, group)
+        weights = basis.weights[cells]
+        x, y = lattice.x[basis.columns[cells]], lattice.y[basis.rows[cells]]
+        m0 = np.asarray(weights.sum(axis=0)).ravel() * area
+        mx, my = weights.T @ (x - x.mean()) * area, weights.T @ (y - y.mean()) * area
+        zero = np.zeros(n)
+        rows += [np.concatenate([m0, zero]), np.concatenate([zero, m0]), np.concatenate([-my, mx])]
+    if not rows:
+        return np.zeros((0, 2 * n))
+    stacked = np.stack(rows)
+    return np.asarray(stacked / np.linalg.norm(stacked, axis=1, keepdims=True))
+
+
+def normal_equations(data: LinearData, gel: Gel, *, response: NDArray[np.float64] | None = None) -> NormalEquations:
+    """Reduce data and gel to the normal equations of the traction coefficients.
+
+    ``response`` may be passed again while the gel and the data positions stay the same (Gauss-Newton steps).
+    """
+    if response is None:
+        kernel = node_kernel(gel, data.lattice.shape, data.lattice.spacing, receiver="point")
+        response = response_matrix(data, kernel)
+    z = nuisance_columns(data)
+    d = data.value.reshape(-1)
+    px, pz, pd = (_weigh(data.precision, block) for block in (response, z, d))
+    information, score, energy = response.T @ px, px.T @ d, float(d @ pd)
+    # Eliminate the motions of the frame: their flat prior leaves the Schur complement.
+    zz, zx, zd = z.T @ pz, pz.T @ response, pz.T @ d
+    solved = linalg.solve(zz, np.column_stack([zd, zx]), assume_a="sym")
+    information -= zx.T @ solved[:, 1:]
+    score -= zx.T @ solved[:, 0]
+    energy -= float(zd @ solved[:, 0])
+    solved[:, 1:] *= -1.0
+    return NormalEquations(
+        0.5 * (information + information.T), score, energy,
+        balance_rows(data.basis, data.lattice, data.groups), response, z, solved, 2 * data.rows.size - z.shape[1],
+    )  # fmt: skip
+
+
+def posterior(
+    normal: NormalEquations, prior: Sequence[CellPrior], amplitudes: NDArray[np.float64], length: float
+) -> tuple[Solution, NDArray[np.float64]]:
+    """Posterior at a given prior strength, and each cell's number of well-determined coefficients.
+
+    Raises
+    ------
+    ConvergenceError
+        When the data do not determine the flat directions (no data near the outline).
+    """
+    s = normal.information.copy()
+    for cell, a in zip(prior, amplitudes, strict=True):
+        s[np.ix_(cell.index, cell.index)] += cell.precision / a**2
+    scale = 1.0 / np.sqrt(np.diag(s))
+    try:
+        factor = linalg.cholesky(s * scale * scale[:, None], lower=True, overwrite_a=True, check_finite=False)
+    except linalg.LinAlgError as error:
+        raise ConvergenceError(
+            "the beads do not determine the traction inside the outline", code="undetermined",
+            remedy="check that the outline lies on ground with beads",
+        ) from error  # fmt: skip
+    log_det = 2.0 * np.log(np.diag(factor)).sum() - 2.0 * np.log(scale).sum()
+    inverse, info = linalg.lapack.dpotri(factor, lower=True, overwrite_c=True)
+    if info != 0:
+        raise ConvergenceError("the posterior's covariance could not be formed", code="undetermined")
+    covariance = np.tril(inverse)
+    covariance += np.tril(covariance, -1).T
+    covariance *= scale
+    covariance *= scale[:, None]
+    mean = covariance @ normal.score
+    quadratic = float(normal.score @ mean)
+    log_evidence = -0.5 * normal.energy + 0.5 * quadratic - 0.5 * log_det
+    b = normal.balance
+    if b.shape[0]:
+        cb = covariance @ b.T
+        bcb = b @ cb
+        gain = linalg.solve(bcb, cb.T, assume_a="pos").T
+        excess = b @ mean
+        log_evidence -= 0.5 * np.linalg.slogdet(bcb)[1] + 0.5 * float(excess @ linalg.solve(bcb, excess, assume_a="pos"))
+        mean = mean - gain @ excess
+        covariance -= gain @ cb.T
+        # A second pass takes the balance from 1e-9 to rounding.
+        mean -= gain @ (b @ mean)
+    determined = np.empty(len(prior))
+    for i, (cell, a) in enumerate(zip(prior, amplitudes, strict=True)):
+        block = covariance[np.ix_(cell.index, cell.index)]
+        determined[i] = cell.rank - float(np.sum(cell.precision * block)) / a**2
+        log_evidence += cell.log_normaliser - cell.rank * np.log(a)
+    chi_square = normal.energy - 2.0 * float(mean @ normal.score) + float(mean @ (normal.information @ mean))
+    # Expected misfit: data minus what the fit has absorbed, trace(information covariance).
+    absorbed = float(np.sum(normal.information * covariance))
+    nuisance = normal.motion_solver[:, 0] + normal.motion_solver[:, 1:] @ mean
+    return (
+        Solution(mean, covariance, nuisance, float(log_evidence), amplitudes, length, chi_square, normal.count - absorbed),
+        determined,
+    )
+
+
+def _strengthen(
+    normal: NormalEquations, prior: Sequence[CellPrior], start: NDArray[np.float64], length: float, tolerance: float
+) -> Solution:
+    """Amplitude of every cell by maximum evidence (MacKay's fixed point, with steps extrapolated in log amplitude)."""
+    log_a = np.log(start)
+    previous: tuple[NDArray[np.float64], NDArray[np.float64]] | None = None
+    for iteration in range(1, 41):
+        solution, determined = posterior(normal, prior, np.exp(log_a), length)
+        size = np.array([float(solution.mean[c.index] @ (c.precision @ solution.mean[c.index])) for c in prior])
+        # Fewer than half a coefficient determined: the data carry no structure beyond the moments, stop the collapse.
+        step = 0.5 * np.log(np.maximum(size, 1e-300) / np.maximum(determined, 0.5)) - log_a
+        step = np.clip(step, -1.5, 1.5)
+        if np.all(np.abs(step) < tolerance):
+            return replace(solution, iterations=iteration)
+        if previous is not None:  # Aitken: the fixed point contracts slowly when few coefficients are determined
+            old_step, old_log = previous
+            rate = np.clip(step / np.where(np.abs(old_step) > 1e-12, old_step, 1.0), -0.5, 0.8)
+            move = step / (1.0 - rate)
+        else:
+            move = step
+        previous = (step, log_a)
+        log_a = log_a + np.clip(move, -2.0, 2.0)
+        if np.any(log_a < np.log(start) - 12):
+            log_a = np.maximum(log_a, np.log(start) - 12)
+    return replace(solution, iterations=iteration)
+
+
+def best_posterior(
+    data: LinearData,
+    normal: NormalEquations,
+    *,
+    start_amplitude: NDArray[np.float64],
+    lengths: Sequence[float],
+    start_length: float,
+    tolerance: float = 0.02,
+    priors: dict[float, tuple[CellPrior, ...]] | None = None,
+) -> Solution:
+    """Posterior at the amplitude and correlation length of highest evidence.
+
+    ``lengths`` is searched from ``start_length`` towards higher evidence; ``priors`` caches what does not depend on the data.
+    """
+    cache = {} if priors is None else priors
+    done: dict[int, Solution] = {}
+    start = start_amplitude
+
+    def at(i: int) -> Solution:
+        nonlocal start
+        if i not in done:
+            if lengths[i] not in cache:
+                cache[lengths[i]] = make_prior(data.basis, data.lattice, length=lengths[i])
+            done[i] = _strengthen(normal, cache[lengths[i]], start, lengths[i], tolerance)
+            start = done[i].amplitudes
+        return done[i]
+
+    best = int(np.argmin(np.abs(np.asarray(lengths) - start_length)))
+    at(best)
+    for direction in (-1, 1):
+        while 0 <= best + direction < len(lengths) and at(best + direction).log_evidence > done[best].log_evidence:
+            best += direction
+    profile = tuple(sorted((lengths[i], s.log_evidence) for i, s in done.items()))
+    return replace(done[best], profile=profile)

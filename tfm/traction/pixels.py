@@ -1,0 +1,270 @@
+r"""Traction from the pixels themselves: integrated digital image correlation with the gel as kinematic basis.
+
+Minimises :math:`\sum (I_s(x + o + G T) - I_r(x))^2 / v` plus the prior by Gauss-Newton (Hild & Roux, Strain 42:69, 2006;
+Leclerc et al., LNCS 5496:161, 2009). Every step is the bounded problem of :mod:`tfm.traction.gaussian` with the blocks'
+sensitivity as precision. There is no interrogation window, so a steep gradient under a cell is not blurred.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import ndimage
+
+from tfm.displacement.model import DisplacementField
+from tfm.errors import MeasurementError
+from tfm.gel import Gel, displacement, node_kernel
+from tfm.images.model import Outlines
+from tfm.traction.blocks import Blocks, make_blocks
+from tfm.traction.bounded import choose_step, solve, vector_data, whole_groups
+from tfm.traction.gaussian import LinearData, NormalEquations, Solution, nuisance_columns, response_matrix
+from tfm.traction.lattice import Lattice, cover_outlines, image_lattice, make_nodes
+from tfm.traction.model import TractionField
+from tfm.traction.prior import CellPrior
+from tfm.traction.result import lattice_traction, make_result
+from tfm.traction.warp import FramePair, NoiseModel, PixelTerms, fit_noise, pixel_terms, prepare_pair, resample_matrix
+
+__all__ = ["infer_image"]
+
+
+@dataclass
+class _Loop:
+    """What stays the same through the Gauss-Newton steps."""
+
+    pair: FramePair
+    lattice: Lattice
+    b: int
+    pixel: float
+    gel: Gel
+    covered: NDArray[np.int32]
+    blocks: Blocks
+    data: LinearData
+    kernel: NDArray[np.float64]
+    response: NDArray[np.float64]
+    motions: NDArray[np.float64]
+    drift: NDArray[np.float64]
+    quiet: NDArray[np.bool_]
+    up_y: NDArray[np.float32]
+    up_x: NDArray[np.float32]
+
+    def pixel_displacement(self, mean: NDArray[np.float64], motion: NDArray[np.float64]) -> NDArray[np.float32]:
+        """``(2, NY, NX)`` px: drift + motions of the frame + elastic displacement, at every pixel."""
+        u = displacement(self.gel, lattice_traction(self.data, mean), self.lattice.spacing, kernel=self.kernel)
+        x = (np.arange(self.lattice.shape[1]) - 0.5 * (self.lattice.shape[1] - 1)) * self.lattice.spacing
+        y = (np.arange(self.lattice.shape[0]) - 0.5 * (self.lattice.shape[0] - 1))[:, None] * self.lattice.spacing
+        extra = list(motion[2:])
+        for name in self.data.nuisance[1:]:
+            value = extra.pop(0)
+            u[0] += value * (-y if name == "rotation" else x)
+            u[1] += value * (x if name == "rotation" else y)
+        shift = (self.drift + motion[:2]) / self.pixel
+        fine = [self.up_y @ (u[i] / self.pixel).astype(np.float32) @ self.up_x.T + np.float32(shift[i]) for i in range(2)]
+        return np.stack(fine)
+
+
+@dataclass(frozen=True)
+class _Step:
+    data: LinearData
+    terms: PixelTerms
+    scale: float
+    efficiency: float
+    misfit: float
+    rejected: int
+
+
+def _linearise(
+    loop: _Loop, terms: PixelTerms, mean: NDArray[np.float64], motion: NDArray[np.float64], *, robust: bool
+) -> _Step:
+    """Blocks of pixels as data for the bounded problem, with the noise scaled to what quiet ground shows."""
+    j, v, s = (loop.blocks.sum(a) for a in (terms.sensitivity, terms.variance, terms.score))
+    det = np.maximum(v[0] * v[2] - v[1] ** 2, 0.0)
+    filled = (v[0] > 0.02 * np.median(v[0][v[0] > 0])) & (det > 1e-6 * v[0] * v[2])
+    chi = np.where(filled, (v[2] * s[0] ** 2 - 2 * v[1] * s[0] * s[1] + v[0] * s[1] ** 2) / np.where(filled, det, 1.0), 0.0)
+    quiet = filled & loop.quiet
+    if quiet.sum() < 30:
+        quiet = filled
+    # Median of chi-square with two degrees of freedom is 2 ln 2; robust against moving debris on the ground.
+    scale = max(float(np.median(chi[quiet])) / (2.0 * np.log(2.0)), 1e-6)
+    kept = filled.copy()
+    if robust:
+        # Blocks that no displacement explains (lost beads, dirt); a steep gradient raises all blocks near it, so the bound
+        # follows the neighbourhood of the cell.
+        near = filled & ~loop.quiet
+        bound = 18.0 * scale * max(1.0, float(np.median(chi[near])) / (2.0 * np.log(2.0) * scale) if near.any() else 1.0)
+        kept &= chi < bound
+    # One number turns score and sensitivity into score and information of a likelihood: variance = sensitivity.
+    efficiency = float((j[0] + j[2])[kept].sum() / (v[0] + v[2])[kept].sum()) / scale
+    weight = efficiency * kept
+    now = (loop.response @ mean + loop.motions @ motion).reshape(2, -1)
+    jdet = j[0] * j[2] - j[1] ** 2
+    solid = kept & (jdet > 1e-3 * (j[0] + j[2]) ** 2) & (j[0] > 0)
+    safe = np.where(solid, jdet, 1.0)
+    shift = np.stack([j[2] * s[0] - j[1] * s[1], j[0] * s[1] - j[1] * s[0]]) / safe * solid
+    # A block whose sensitivity cannot be inverted still counts in the information, with no news of its own.
+    precision = j * weight / loop.pixel**2
+    near = kept & (loop.blocks.distance <= 6e-6 / loop.lattice.spacing)
+    used = near if near.sum() > 20 else kept
+    misfit = float(chi[used].sum() / (2.0 * used.sum())) / scale
+    data = replace(loop.data, value=now + shift * loop.pixel, precision=precision)
+    return _Step(data, terms, scale, efficiency, misfit, int(filled.sum() - kept.sum()))
+
+
+def _dipole_rows(data: LinearData) -> NDArray[np.float64]:
+    """``(3 n_cells, 2 n)``: xx, xy, yy of every cell's dipole as functionals of the coefficients (N m per Pa)."""
+    basis, lattice, n = data.basis, data.lattice, data.basis.size
+    rows = []
+    for label in np.unique(basis.labels):
+        cells = basis.labels == label
+        weights = basis.weights[cells]
+        x, y = lattice.x[basis.columns[cells]], lattice.y[basis.rows[cells]]
+        mx = weights.T @ (x - x.mean()) * lattice.spacing**2
+        my = weights.T @ (y - y.mean()) * lattice.spacing**2
+        zero = np.zeros(n)
+        rows += [np.concatenate([mx, zero]), 0.5 * np.concatenate([my, mx]), np.concatenate([zero, my])]
+    return np.stack(rows)
+
+
+def infer_image(
+    relaxed: NDArray[np.float32],
+    stressed: NDArray[np.float32],
+    pixel_size: float,
+    outlines: Outlines,
+    gel: Gel,
+    *,
+    start: DisplacementField,
+    previous: TractionField | None = None,
+    nuisance: tuple[str, ...] = ("offset",),
+    most_coefficients: int = 1100,
+    most_steps: int = 20,
+    tolerance: float = 0.02,
+    lengths: Sequence[float] | None = None,
+) -> TractionField:
+    r"""Posterior of the traction inside the outlines, given the two bead images.
+
+    Parameters
+    ----------
+    relaxed, stressed
+        ``(NY, NX)`` grey levels of any linear scale.
+    pixel_size
+        m.
+    outlines
+        ``(NY, NX)`` labels in the relaxed image's frame.
+    gel
+        Elastic properties.
+    start
+        Displacement good to about a pixel, with the drift of the stressed frame.
+    previous
+        Result of the frame before in a series: begins there instead of at ``start``'s vectors.
+    nuisance
+        Motions of the stressed frame estimated together: ``offset``, on request ``rotation`` and ``scale``.
+    most_steps, tolerance
+        The steps end when no component of any dipole moves by more than ``tolerance`` of its standard deviation.
+
+    Returns
+    -------
+    TractionField
+        With ``misfit`` = chi-square of the blocks under and near the cells per degree of freedom, in units of what quiet
+        ground shows.
+
+    Raises
+    ------
+    MeasurementError
+        Constant frames, no outline, too small an image.
+
+    Examples
+    --------
+    See ``docs/api.md`` for a complete run from synthetic beads.
+    """
+    began = time.perf_counter()
+    lattice, b = image_lattice(relaxed.shape, pixel_size)
+    covered = cover_outlines(lattice, outlines.labels, pixel_size)
+    basis = make_nodes(covered, step=choose_step(covered, most=most_coefficients))
+    groups, cut = whole_groups(covered)
+    begin = vector_data(start, lattice, basis, covered, groups=groups, nuisance=nuisance)
+    options = {} if lengths is None else {"lengths": lengths}
+    priors: dict[float, tuple[CellPrior, ...]] = {}
+    if previous is not None and previous.solution is not None and previous.data is not None and (
+        previous.solution.mean.size == 2 * basis.size
+    ):  # fmt: skip
+        solution = previous.solution
+        solution = replace(solution, nuisance=np.zeros_like(solution.nuisance))
+    else:
+        solution, _ = solve(begin, gel, priors=priors, **options)
+    loop = _make_loop(relaxed, stressed, pixel_size, gel, lattice, b, covered, begin, start.drift)
+    noise = NoiseModel(0.0, 1.0)
+    functionals = _dipole_rows(begin)
+    normal: NormalEquations
+    history: list[float] = []
+    converged = False
+    dipole = functionals @ solution.mean
+    for step_number in range(1, most_steps + 1):
+        u = loop.pixel_displacement(solution.mean, solution.nuisance)
+        # Wide gradients first: they pull a start that is a bead's width away; then the bead's own width.
+        smoothing = 2.0 if step_number == 1 else 1.0
+        terms = pixel_terms(
+            loop.pair, u[0], u[1], b=b, shape=lattice.shape, smoothing=smoothing, noise=noise,
+            outlier_sigma=np.inf if step_number <= 2 else 6.0,
+        )  # fmt: skip
+        if step_number <= 4:
+            noise = fit_noise(terms, _quiet_pixels(loop, relaxed.shape))
+        step = _linearise(loop, terms, solution.mean, solution.nuisance, robust=step_number > 2)
+        solution, normal = solve(step.data, gel, start=solution, response=loop.response, priors=priors, **options)
+        new = functionals @ solution.mean
+        sd = np.sqrt(np.einsum("ij,jk,ik->i", functionals, solution.covariance, functionals))
+        history.append(float(np.max(np.abs(new - dipole) / sd)))
+        dipole = new
+        if step_number > 4 and history[-1] < tolerance:
+            converged = True
+            break
+    notes = list(start.notes)
+    if not converged:
+        notes.append(f"the pixel method did not settle: last step moved a dipole by {history[-1]:.2f} of its standard deviation")
+    if step.misfit > 2.0:
+        notes.append(
+            f"the images are not explained under the cell (misfit {step.misfit:.1f}, expected 1): check outline, focus and gel"
+        )
+    statistics = {
+        "steps": len(history), "converged": converged, "last_move_sd": history[-1], "noise_gain": noise.gain,
+        "noise_floor": noise.floor, "noise_scale": step.scale, "efficiency": step.efficiency, "blocks_rejected": step.rejected,
+        "seconds": time.perf_counter() - began, "block_px": b,
+    }  # fmt: skip
+    return make_result(
+        step.data, gel, covered, solution, normal, method="image", misfit=step.misfit, cut=cut, notes=tuple(notes),
+        statistics=statistics, offset_before=np.asarray(solution.nuisance[:2]),
+    )  # fmt: skip
+
+
+def _make_loop(
+    relaxed: NDArray[np.float32], stressed: NDArray[np.float32], pixel: float, gel: Gel, lattice: Lattice, b: int,
+    covered: NDArray[np.int32], begin: LinearData, drift: NDArray[np.float64],
+) -> _Loop:  # fmt: skip
+    blocks = make_blocks(covered > 0, smallest=2, largest=16, ratio=3.0)
+    data = replace(
+        begin, rows=blocks.rows, columns=blocks.columns, value=np.zeros((2, blocks.rows.size)),
+        precision=np.zeros((3, blocks.rows.size)),
+    )  # fmt: skip
+    kernel = node_kernel(gel, lattice.shape, lattice.spacing, receiver="point")
+    quiet = blocks.distance * lattice.spacing > 8e-6
+    return _Loop(
+        prepare_pair(np.asarray(relaxed, np.float32), np.asarray(stressed, np.float32)), lattice, b, pixel, gel, covered, blocks,
+        data, kernel, response_matrix(data, kernel), nuisance_columns(data), drift, quiet,
+        resample_matrix(relaxed.shape[0], lattice.shape[0], b), resample_matrix(relaxed.shape[1], lattice.shape[1], b),
+    )  # fmt: skip
+
+
+def _quiet_pixels(loop: _Loop, shape: tuple[int, int]) -> NDArray[np.bool_]:
+    far = ndimage.distance_transform_edt(loop.covered == 0) * loop.lattice.spacing > 5e-6
+    if far.sum() < 100:
+        far = loop.covered == 0
+    if far.sum() < 20:
+        raise MeasurementError(
+            "the outlines leave no ground in the image to measure the noise on", code="no-ground",
+            remedy="image a larger field or draw tighter outlines",
+        )  # fmt: skip
+    rows = np.minimum(np.arange(shape[0]) // loop.b, loop.lattice.shape[0] - 1)
+    columns = np.minimum(np.arange(shape[1]) // loop.b, loop.lattice.shape[1] - 1)
+    return np.asarray(far[np.ix_(rows, columns)])

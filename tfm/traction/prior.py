@@ -1,0 +1,102 @@
+r"""What is believed of a cell's traction before the beads are seen.
+
+Traction inside one outline is a Matern-3/2 random field (independent for x and y),
+:math:`k(r) = a^2 (1 + \sqrt 3 r/\ell)\exp(-\sqrt 3 r/\ell)` (Rasmussen & Williams, Gaussian Processes for Machine Learning,
+2006, eq. 4.17), with its zeroth and first moments **flat**: every dipole is equally likely beforehand, so that a faint
+coherent pull is not drawn towards zero. Dividing a Gaussian :math:`N(T; 0, K)` by the density that it gives to the moments
+:math:`F T` leaves the precision :math:`\Lambda = K^{-1} - F^T (F K F^T)^{-1} F`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import linalg
+
+from tfm.traction.lattice import Lattice, NodeBasis
+
+__all__ = ["CellPrior", "first_moments", "make_prior", "matern"]
+
+
+@dataclass(frozen=True)
+class CellPrior:
+    """Prior of one cell at unit amplitude.
+
+    Attributes
+    ----------
+    label
+        The cell.
+    index
+        ``(2 n_l,)`` positions of its coefficients in the whole vector.
+    precision
+        ``(2 n_l, 2 n_l)`` at amplitude 1 Pa, rank ``2 n_l - 6``.
+    rank
+        Its rank.
+    log_normaliser
+        Logarithm of the density's constant at amplitude 1 Pa, without the powers of 2 pi.
+    """
+
+    label: int
+    index: NDArray[np.intp]
+    precision: NDArray[np.float64]
+    rank: int
+    log_normaliser: float
+
+
+def matern(distance: NDArray[np.float64], length: float) -> NDArray[np.float64]:
+    """Matern-3/2 correlation at ``distance`` for the length scale ``length`` (same unit).
+
+    Examples
+    --------
+    >>> float(matern(np.array(0.0), 2e-6))
+    1.0
+    """
+    s = np.sqrt(3.0) * distance / length
+    return np.asarray((1.0 + s) * np.exp(-s))
+
+
+def first_moments(basis: NodeBasis, lattice: Lattice, label: int) -> NDArray[np.float64]:
+    """Rows of zeroth and first moments of one cell, ``(6, 2 n_l)``, in m^2 and m^3.
+
+    In order: integral of T_x, T_y, then of (x - c_x) T_x, (y - c_y) T_x, (x - c_x) T_y, (y - c_y) T_y over the covered
+    lattice cells; c is their centroid.
+    """
+    cells = basis.labels == label
+    nodes = np.nonzero(basis.node_labels == label)[0]
+    weights = basis.weights[cells][:, nodes]
+    x, y = lattice.x[basis.columns[cells]], lattice.y[basis.rows[cells]]
+    area = lattice.spacing**2
+    m0 = np.asarray(weights.sum(axis=0)).ravel() * area
+    mx, my = weights.T @ (x - x.mean()) * area, weights.T @ (y - y.mean()) * area
+    zero = np.zeros_like(m0)
+    return np.stack(
+        [np.concatenate(pair) for pair in ((m0, zero), (zero, m0), (mx, zero), (my, zero), (zero, mx), (zero, my))]
+    )
+
+
+def make_prior(basis: NodeBasis, lattice: Lattice, *, length: float) -> tuple[CellPrior, ...]:
+    """The prior of every cell for one correlation length (m)."""
+    result = []
+    n = basis.size
+    for label in np.unique(basis.node_labels):
+        nodes = np.nonzero(basis.node_labels == label)[0]
+        r = basis.node_rows[nodes] * lattice.spacing
+        c = basis.node_columns[nodes] * lattice.spacing
+        k = matern(np.hypot(r[:, None] - r[None], c[:, None] - c[None]), length)
+        k[np.diag_indices_from(k)] += 1e-8  # keeps the factorisation stable for lengths of many nodes
+        factor = linalg.cholesky(k, lower=True)
+        inverse = linalg.cho_solve((factor, True), np.eye(nodes.size))
+        f = first_moments(basis, lattice, int(label))
+        f = f / np.linalg.norm(f, axis=1, keepdims=True)  # scale of F drops out of the precision
+        m = nodes.size
+        kf = np.hstack([f[:, :m] @ k, f[:, m:] @ k])
+        fkf = kf @ f.T
+        rank = 2 * m - f.shape[0]
+        precision = linalg.block_diag(inverse, inverse) - f.T @ linalg.solve(fkf, f, assume_a="pos")
+        log_normaliser = -2.0 * np.log(np.diag(factor)).sum() + 0.5 * np.linalg.slogdet(fkf)[1]
+        result.append(
+            CellPrior(int(label), np.concatenate([nodes, nodes + n]), 0.5 * (precision + precision.T), rank, float(log_normaliser))
+        )
+    return tuple(result)
