@@ -1,0 +1,166 @@
+"""All picture files of one field, drawn once per state of its data: any worker can do this while the run goes on."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from matplotlib.figure import Figure
+
+from tfm.batch.atomic import file_sha256
+from tfm.report.fielddata import FieldArrays, read_arrays
+from tfm.report.figures import beads_figure, maps_figure, residual_figure, rows_of_frame
+from tfm.report.files import svg_text, thumbnail, write_bytes
+from tfm.report.numbers import numbers_figure
+from tfm.report.results import FieldResult, number
+from tfm.report.style import drawing
+from tfm.report.words import alt_maps, cell_sentence, plain
+
+__all__ = ["DRAWING_VERSION", "Picture", "Pictures", "draw_field", "strongest_frame"]
+
+#: Raise when figures change, so that pictures of earlier versions are drawn anew.
+DRAWING_VERSION = 1
+
+
+@dataclass(frozen=True)
+class Picture:
+    """One vector file of a field, relative to the field's folder, with what it shows."""
+
+    file: str
+    title: str
+    caption: str
+    alt: str
+    width: int
+    height: int
+
+
+@dataclass(frozen=True)
+class Pictures:
+    """What was drawn of a field: the frame shown, the vector files, the thumbnail's name, the arrays' hash."""
+
+    frame: int
+    pictures: tuple[Picture, ...]
+    thumb: str | None
+    sha256: str
+
+
+def strongest_frame(field: FieldResult) -> int:
+    """The frame with the largest total of contractile moments: the one that pictures show."""
+    totals: dict[int, float] = {}
+    for row in field.cells:
+        value = number(row, "contractile_moment_pNm")
+        if value is not None:
+            frame = int(number(row, "frame") or 0)
+            totals[frame] = totals.get(frame, 0.0) + abs(value)
+    return max(totals, key=lambda f: (totals[f], -f)) if totals else 0
+
+
+def _state(field: FieldResult, digest: str) -> str:
+    """A hash of everything that the pictures depend on."""
+    rows = [[dict(r) for r in t] for t in (field.frames, field.cells, field.pairs)]
+    about = [
+        DRAWING_VERSION,
+        field.name,
+        digest,
+        rows,
+        dict(field.gel or {}),
+        field.record.get("budget"),
+        field.record.get("poisson_evidence"),
+        field.change_only,
+    ]
+    return hashlib.sha256(json.dumps(about, sort_keys=True, default=str).encode()).hexdigest()
+
+
+def _alt_numbers(field: FieldResult, frame: int) -> str:
+    parts = []
+    for row in rows_of_frame(field.pairs, frame)[:6]:
+        parts.append(
+            f"Cells {row['cell_a']} and {row['cell_b']}: interaction energy {plain(number(row, 'energy_fJ'))} fJ."
+        )
+    gel = field.gel
+    if gel is not None and number(gel, "poisson_best") is not None:
+        parts.append(
+            f"Poisson ratio from the beads {plain(number(gel, 'poisson_best'))}, 95 % interval {plain(number(gel, 'poisson_low'))} "
+            f"to {plain(number(gel, 'poisson_high'))}, entered {plain(number(gel, 'poisson'))}: {gel.get('verdict')}."
+        )
+    parts += [cell_sentence(r, change=field.change_only) for r in rows_of_frame(field.cells, frame)]
+    return " ".join(parts)
+
+
+def _kinds(field: FieldResult, frame: int) -> list[tuple[str, Callable[[FieldArrays], Figure | None], str, str, str]]:
+    """Name, drawing, title, caption and alt text of every figure of a field."""
+    rows = rows_of_frame(field.cells, frame)
+    shift = next(iter(rows_of_frame(field.frames, frame)), {})
+    drift = f"Drift {plain(number(shift, 'drift_x_px'))} px in x and {plain(number(shift, 'drift_y_px'))} px in y."
+    misfit = f"Misfit {plain(number(shift, 'misfit'))}, 1 is expected."
+    return [
+        (
+            "maps",
+            lambda a: maps_figure(field, a),
+            "What moved, what pulled, where the moment is made",
+            "Arrows are measured vectors (not every one), coloured by size and drawn to the scale of the bar in the lower left corner; in the "
+            "right map purple pulls towards the cell's centroid and orange pushes away. Bars with arrow heads are the principal axes: heads point "
+            "inwards along an axis that contracts; the shaded tips are 95 % regions of angle and size.",
+            alt_maps(field, rows),
+        ),
+        (
+            "beads",
+            lambda a: beads_figure(field, a),
+            "Relaxed and stressed beads on top of each other",
+            "Orange: relaxed. Blue: stressed. White: both agree. Left and middle: the quietest ground before and after the drift is taken out; if "
+            "the middle is not white, distrust this field. Right: the ground that moved most.",
+            f"Relaxed beads in orange over stressed beads in blue, before and after drift, and where the gel moved most. {drift}",
+        ),
+        (
+            "residual",
+            lambda a: residual_figure(field, a),
+            "What the traction does not explain",
+            "Observed minus predicted. A good field is even noise without structure; structure outside the outline means a wrong gel or a cell "
+            "that is not outlined, structure inside means traction finer than the lattice or lost focus.",
+            f"Maps of observed minus predicted displacement, x and y component. {misfit}",
+        ),
+        (
+            "numbers",
+            lambda a: numbers_figure(field, a.frame),
+            "Numbers behind the picture",
+            "As far as this field has them: moment over time with its 95 % band, interaction energies of pairs, the error budget, and what the "
+            "beads say about the Poisson ratio.",
+            _alt_numbers(field, frame),
+        ),
+    ]
+
+
+def draw_field(root: Path, field: FieldResult, *, redo: bool = False) -> Pictures:
+    """Draw a field's figures below ``root/figures/`` unless they are there for the very same data.
+
+    A field that cannot be drawn is never an error of the run: it has no arrays, and then it has no pictures.
+    """
+    folder = root / "figures" / field.folder
+    digest = file_sha256(field.data) if field.data is not None else ""
+    state, stamp = _state(field, digest), folder / "drawn.json"
+    if not redo and stamp.exists():
+        old: dict[str, Any] = json.loads(stamp.read_text(encoding="utf-8"))
+        if old.get("state") == state and all((folder / p["file"]).exists() for p in old["pictures"]):
+            return Pictures(old["frame"], tuple(Picture(**p) for p in old["pictures"]), old["thumb"], digest)
+    frame = strongest_frame(field)
+    arrays = read_arrays(field.data, frame=frame) if field.data is not None else FieldArrays(frame=frame, frames=1)
+    pictures = []
+    with drawing():
+        for name, make, title, caption, alt in _kinds(field, frame):
+            figure = make(arrays)
+            if figure is None:
+                continue
+            write_bytes(folder / f"{name}.svg", svg_text(figure, title=f"{field.name}: {title}").encode())
+            width, height = (round(v * 100) for v in figure.get_size_inches())
+            pictures.append(Picture(f"{name}.svg", title, caption, alt, width, height))
+    small = thumbnail(arrays)
+    if small is not None:
+        write_bytes(folder / "thumb.webp", small)
+    drawn = Pictures(frame, tuple(pictures), "thumb.webp" if small is not None else None, digest)
+    about = {"state": state, "frame": frame, "thumb": drawn.thumb, "pictures": [vars(p) for p in pictures]}
+    write_bytes(stamp, (json.dumps(about, indent=1) + "\n").encode())
+    return drawn

@@ -1,0 +1,271 @@
+"""The pages: ``report.html`` and one page per field, from templates that escape everything a user typed."""
+
+from __future__ import annotations
+
+import hashlib
+import re
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from markupsafe import Markup
+
+from tfm.report.drawing import Pictures, draw_field
+from tfm.report.fieldpage import field_context
+from tfm.report.files import svg_text, write_bytes
+from tfm.report.groups import Group, differences, groups_of, verdict_sentence
+from tfm.report.overview import moments_figure
+from tfm.report.results import FieldResult, Results, number, read_results
+from tfm.report.style import MARKS, drawing
+from tfm.report.triage import LIMITS, findings, first_look, relative_error
+from tfm.report.words import plain, with_error
+
+__all__ = ["build_report"]
+
+_COLUMNS = (
+    ("field", "Field", False),
+    ("status", "Status", False),
+    ("condition", "Condition", False),
+    ("cells", "Cells", True),
+    ("moment", "Contractile moment, pN m", True),
+    ("error", "Error, %", True),
+    ("axis", "Axis, °", True),
+    ("energy", "Strain energy, fJ", True),
+    ("misfit", "Misfit", True),
+    ("noise", "Noise, nm", True),
+    ("gel", "Gel", False),
+    ("notes", "Notes", False),
+)
+_WIDE = ("cells", "axis", "energy", "misfit", "noise", "gel", "notes")
+_NUMERIC = (
+    ("moment", "Contractile moment, pN m"),
+    ("error", "Error of the moment, %"),
+    ("energy", "Strain energy, fJ"),
+    ("misfit", "Misfit"),
+    ("noise", "Displacement noise, nm"),
+    ("cells", "Cells"),
+)
+
+
+def _environment() -> Environment:
+    found = Environment(
+        loader=PackageLoader("tfm.report", "templates"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+    found.globals.update(marks=MARKS, plain=plain)
+    return found
+
+
+def build_report(results_dir: Path, *, redo: bool = False) -> Path:
+    """Write ``report.html`` and ``figures/`` of a results folder, from nothing but that folder.
+
+    Parameters
+    ----------
+    results_dir
+        A folder that ``tfm run`` wrote, finished or not.
+    redo
+        Draw all pictures anew; by default a picture whose data did not change is kept.
+
+    Returns
+    -------
+    Path
+        The report.
+
+    Raises
+    ------
+    InputError
+        When the folder holds no tables.
+    """
+    results = read_results(Path(results_dir))
+    root, environment = results.root, _environment()
+    drawn = {f.name: draw_field(root, f, redo=redo) for f in results.fields}
+    css = _template(environment, "style.css")
+    write_bytes(root / "figures" / "page.css", css.encode())
+    page = environment.get_template("field.html")
+    for i, field in enumerate(results.fields):
+        around = {
+            "before": results.fields[i - 1] if i else None,
+            "after": results.fields[i + 1] if i + 1 < len(results.fields) else None,
+        }
+        text = page.render(field_context(field, drawn[field.name], results.columns), issues=findings(field), **around)
+        write_bytes(root / "figures" / field.folder / "index.html", text.encode())
+    return write_bytes(root / "report.html", _index(results, drawn, environment, css).encode())
+
+
+def _template(environment: Environment, name: str) -> str:
+    """A style sheet or script as it stands: these are ours and hold nothing that a user typed."""
+    if environment.loader is None:
+        return ""
+    return environment.loader.get_source(environment, name)[0]
+
+
+def _index(results: Results, drawn: Mapping[str, Pictures], environment: Environment, css: str) -> str:
+    excluded = {name for name, (decision, _) in results.decisions.items() if decision == "exclude"}
+    kept = [f for f in results.fields if f.name not in excluded]
+    groups = groups_of(kept)
+    found = differences(groups)
+    sheet = [dict(f.sheet) for f in results.fields if f.sheet]
+    return environment.get_template("report.html").render(
+        title=results.root.resolve().name,
+        css=Markup(css),
+        script=Markup(_template(environment, "report.js")),
+        counts=results.counts(),
+        total=len(results.fields),
+        cell_count=sum(len(f.cell_names) for f in results.fields),
+        method=_setting(results.run, "method"),
+        version=_version(results.run),
+        state_sentence=_state_sentence(results, drawn, len(excluded)),
+        look=first_look(results.fields),
+        verdict=verdict_sentence(groups, found),
+        comparisons=found,
+        moments_alt=_moments_alt(groups),
+        conditions=list(dict.fromkeys(f.condition for f in results.fields if f.condition)),
+        numeric=_NUMERIC,
+        columns=_COLUMNS,
+        wide=_WIDE,
+        rows=[_row(f, drawn[f.name]) for f in results.fields],
+        any_change=any(f.change_only for f in results.fields),
+        limits=LIMITS,
+        meanings=results.columns,
+        provenance=_provenance(results.run),
+        run_key=_run_key(results),
+        sheet=sheet,
+        sheet_header=list(dict.fromkeys(k for r in sheet for k in r)),
+        decisions={name: {"decision": d, "note": n} for name, (d, n) in results.decisions.items()},
+        **_moments(results.root, groups),
+    )
+
+
+def _moments(root: Path, groups: Sequence[Group]) -> dict[str, Any]:
+    """The figure of the first screen, as a file for papers and inline with a link behind every mark."""
+    with drawing():
+        plain_figure, linked = moments_figure(groups), moments_figure(groups, links=True)
+        if plain_figure is None or linked is None:
+            return {"moments_svg": "", "moments_file": ""}
+        write_bytes(
+            root / "figures" / "moments.svg", svg_text(plain_figure, title="Contractile moment by condition").encode()
+        )
+        inline = svg_text(linked, title="Contractile moment by condition")
+    inline = inline[inline.index("<svg") :]
+    # Inside a page the figure's own style rules would reach everything else, and hundreds of marks would each be a tab stop.
+    inline = re.sub(r"<style[^>]*>.*?</style>", "", inline, count=1, flags=re.S).replace("<a ", '<a tabindex="-1" ')
+    return {"moments_svg": Markup(inline), "moments_file": "figures/moments.svg"}
+
+
+def _moments_alt(groups: Sequence[Group]) -> str:
+    parts = []
+    for g in groups:
+        interval = f", 95 % interval {plain(g.low)} to {plain(g.high)}" if g.low is not None else ""
+        parts.append(f"{g.condition}: {len(g.cells)} cells, mean {plain(g.mean)} pN m{interval}.")
+    return "Contractile moment of every cell by condition. " + " ".join(parts)
+
+
+def _state_sentence(results: Results, drawn: Mapping[str, Pictures], excluded: int) -> str:
+    total, counts = len(results.fields), results.counts()
+    whole = sum(_verified(f, drawn[f.name]) for f in results.fields)
+    text = f"{counts['ok'] + counts['caution']} of {total} fields gave numbers; the outputs of {whole} of {total} were verified against their hashes."
+    if total and counts["ok"] == total == whole:
+        text = f"All good: {total} of {total} fields are ok and their outputs were verified against their hashes."
+    if excluded:
+        text += f" {excluded} marked 'exclude' {'is' if excluded == 1 else 'are'} left out of the comparison."
+    return text
+
+
+def _verified(field: FieldResult, pictures: Pictures) -> bool:
+    """The arrays are the very bytes that the record speaks of; a failed field has a record and no arrays."""
+    outputs = field.record.get("outputs")
+    if not isinstance(outputs, Mapping):
+        return False
+    return all(
+        field.data is not None and name == field.data.name and digest == pictures.sha256
+        for name, digest in outputs.items()
+    )
+
+
+def _row(field: FieldResult, pictures: Pictures) -> dict[str, Any]:
+    """One line of the table of fields; ``data`` is what the page sorts and filters by."""
+    cells = [r for r in field.cells if number(r, "contractile_moment_pNm") is not None]
+    series = len({r.get("frame") for r in cells}) > 1
+    moments, axes = [], []
+    for name in field.cell_names[:6]:
+        rows = [r for r in cells if r.get("cell") == name]
+        if not rows:
+            continue
+        strongest = max(rows, key=lambda r: abs(number(r, "contractile_moment_pNm") or 0.0))
+        sd = number(strongest, "contractile_moment_total_sd_pNm") or number(strongest, "contractile_moment_sd_pNm")
+        moments.append(("max " if series else "") + with_error(number(strongest, "contractile_moment_pNm"), sd))
+        axes.append(with_error(number(strongest, "axis_deg"), number(strongest, "axis_sd_deg")))
+    if len(field.cell_names) > 6:
+        moments.append(f"and {len(field.cell_names) - 6} more")
+    values = [v for v in (number(r, "contractile_moment_pNm") for r in cells) if v is not None]
+    energies = [v for v in (number(r, "strain_energy_fJ") for r in cells) if v is not None]
+    misfits = [v for v in (number(r, "misfit") for r in field.frames) if v is not None]
+    noises = [1e3 * v for v in (number(r, "displacement_noise_um") for r in field.frames) if v is not None]
+    first_axis = number(cells[0], "axis_deg") if cells else None
+    error = relative_error(field)
+    gel = (field.gel or {}).get("verdict", "")
+    top = {
+        "moment": max(values, default=None),
+        "error": error,
+        "axis": first_axis,
+        "energy": max(energies, default=None),
+        "misfit": max(misfits, default=None),
+        "noise": max(noises, default=None),
+    }
+    data: dict[str, Any] = {
+        "status": field.status,
+        "condition": field.condition,
+        "cells": len(field.cell_names),
+        "gel": gel,
+        "notes": field.message,
+    }
+    data |= {k: f"{v:.6g}" if v is not None else "" for k, v in top.items()}
+    if values:
+        data["moment-low"] = f"{min(values):.6g}"
+    alt = f"{field.name}: " + (
+        "; ".join(f"cell {n}: {m} pN m" for n, m in zip(field.cell_names, moments, strict=False)) or "no number"
+    )
+    search = " ".join((field.name, field.condition, field.message, field.status, gel)).lower()
+    thumb = f"figures/{field.folder}/{pictures.thumb}" if pictures.thumb else ""
+    return {
+        "field": field,
+        "thumb": thumb,
+        "alt": alt,
+        "search": search,
+        "data": data,
+        "cells": len(field.cell_names) or "—",
+        "moments": moments or ["—"],
+        "axes": axes or ["—"],
+        "error": plain(error, 2),
+        "energy": plain(top["energy"]),
+        "misfit": plain(top["misfit"]),
+        "noise": plain(top["noise"], 2),
+        "gel": gel or "—",
+    }
+
+
+def _setting(run: Mapping[str, Any], name: str) -> str:
+    settings = run.get("settings")
+    return str(settings.get(name, "")) if isinstance(settings, Mapping) else ""
+
+
+def _version(run: Mapping[str, Any]) -> str:
+    versions = run.get("versions")
+    return str(versions.get("tugtensor", versions.get("tfm", ""))) if isinstance(versions, Mapping) else ""
+
+
+def _provenance(run: Mapping[str, Any]) -> list[tuple[str, str]]:
+    found = []
+    for part in ("settings", "versions"):
+        if isinstance(run.get(part), Mapping):
+            found += [(f"{part}: {k}", str(v)) for k, v in run[part].items() if not isinstance(v, Mapping | list)]
+    return found
+
+
+def _run_key(results: Results) -> str:
+    """Tells this study's decisions from another's in the browser's storage: the fields' names, whatever the folder's place."""
+    return hashlib.sha256("\n".join(f.name for f in results.fields).encode()).hexdigest()[:16]
