@@ -2,29 +2,37 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
-from skimage.feature import peak_local_max
-from skimage.filters import threshold_li, threshold_otsu
+from skimage import feature, filters, segmentation
 from skimage.morphology import remove_small_objects
-from skimage.segmentation import watershed
 
 from tfm.errors import MeasurementError
 from tfm.images.model import Outlines
 
 __all__ = ["segment_cells"]
 
+# The library declares no types.
+_threshold_li: Any = filters.threshold_li
+_threshold_otsu: Any = filters.threshold_otsu
+_peak_local_max: Any = feature.peak_local_max
+_watershed: Any = segmentation.watershed
+
 #: Two halves are two cells when the neck between them is narrower than this part of the smaller half's inner radius.
 _NECK = 0.7
 
 
-def segment_cells(image: NDArray[np.float32], *, file: str = "", smoothing: float = 2.0, min_area: int | None = None) -> Outlines:
+def segment_cells(
+    image: NDArray[np.float32], *, file: str = "", smoothing: float = 2.0, min_area: int | None = None
+) -> Outlines:
     """Bright cells on a dark ground: smoothing, threshold, holes filled, specks removed, touching cells parted.
 
-    The threshold minimises the cross-entropy (Li & Tam, Pattern Recognition Letters 19:771, 1998), on intensities clipped
-    at the 99.9th percentile so that a few bright spots do not set it. Touching cells are parted by a watershed on the
-    distance to the rim where the neck between them is clearly narrower than either.
+    The threshold minimises the cross-entropy (Li & Tam, Pattern Recognition Letters 19:771, 1998), on intensities
+    clipped at the 99.9th percentile so that a few bright spots do not set it. Touching cells are parted by a watershed
+    on the distance to the rim where the neck between them is clearly narrower than either.
 
     Parameters
     ----------
@@ -42,8 +50,12 @@ def segment_cells(image: NDArray[np.float32], *, file: str = "", smoothing: floa
         ``not-finite``.
     """
     if not np.isfinite(image).all():
-        raise MeasurementError("the image of the cells has pixels that are not finite", code="not-finite", file=file,
-                               remedy="export it again, or draw the outlines")  # fmt: skip
+        raise MeasurementError(
+            "the image of the cells has pixels that are not finite",
+            code="not-finite",
+            file=file,
+            remedy="export it again, or draw the outlines",
+        )
     smooth = ndimage.gaussian_filter(np.asarray(image, dtype=np.float64), smoothing)
     smooth = np.minimum(smooth, np.percentile(smooth, 99.9))
     least = min_area if min_area is not None else max(16, image.size // 1000)
@@ -57,13 +69,15 @@ def segment_cells(image: NDArray[np.float32], *, file: str = "", smoothing: floa
 
 
 def _nothing(file: str, why: str) -> MeasurementError:
-    return MeasurementError(f"no cell was found automatically: {why}", code="no-cell-found", file=file, remedy="draw the outlines")
+    return MeasurementError(
+        f"no cell was found automatically: {why}", code="no-cell-found", file=file, remedy="draw the outlines"
+    )
 
 
 def _foreground(smooth: NDArray[np.float64], file: str) -> NDArray[np.bool_]:
     if np.ptp(smooth) <= 1e-6 * max(1e-30, float(np.abs(smooth).max())):
         raise _nothing(file, "the image is uniform")
-    level = float(threshold_li(smooth, initial_guess=float(threshold_otsu(smooth))))
+    level = float(_threshold_li(smooth, initial_guess=float(_threshold_otsu(smooth))))
     mask = smooth > level
     share = float(mask.mean())
     if not 0.0005 <= share <= 0.8:
@@ -80,10 +94,10 @@ def _foreground(smooth: NDArray[np.float64], file: str) -> NDArray[np.bool_]:
 def _part_touching(mask: NDArray[np.bool_]) -> NDArray[np.int32]:
     distance = ndimage.gaussian_filter(ndimage.distance_transform_edt(mask), 1.0) * mask
     components, _ = ndimage.label(mask, structure=np.ones((3, 3)))
-    peaks = peak_local_max(distance, min_distance=3, labels=components, exclude_border=False)
+    peaks = _peak_local_max(distance, min_distance=3, labels=components, exclude_border=False)
     markers = np.zeros(mask.shape, dtype=np.int32)
     markers[tuple(peaks.T)] = np.arange(1, len(peaks) + 1)
-    pieces = watershed(-distance, markers, mask=mask).astype(np.int32)
+    pieces = _watershed(-distance, markers, mask=mask).astype(np.int32)
     return _merge_wide_necks(pieces, distance)
 
 

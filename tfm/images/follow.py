@@ -77,8 +77,9 @@ class LabelFollower:
     """Gives every cell of a time series one number, frame by frame; memory does not grow with the frames.
 
     Each new frame is matched with the last position of every cell seen so far, so that the summed intersection over
-    union is largest (optimal assignment, :func:`scipy.optimize.linear_sum_assignment`). A cell that overlaps nothing seen
-    before is new: it keeps its number where that is free, else it gets the next free one. Numbers are never given twice.
+    union is largest (optimal assignment, :func:`scipy.optimize.linear_sum_assignment`). A cell that overlaps nothing
+    seen before is new: it keeps its number where that is free, else it gets the next free one. No number is given
+    twice.
     """
 
     def __init__(self) -> None:

@@ -100,8 +100,12 @@ class BeadStack:
         """
         if isinstance(plane, str):
             if plane not in ("sharpest", "max"):
-                raise InputError(f"'{plane}' names no plane", code="no-such-plane", file=self.path,
-                                 remedy="write sharpest, max or a plane number from 0")  # fmt: skip
+                raise InputError(
+                    f"'{plane}' names no plane",
+                    code="no-such-plane",
+                    file=self.path,
+                    remedy="write sharpest, max or a plane number from 0",
+                )
             if self.n_planes == 1:
                 return self._plane(t, 0, channel)
             if plane == "sharpest":
@@ -114,10 +118,18 @@ class BeadStack:
 
     def stored(self, t: int = 0, *, channel: int = 0, plane: int = 0) -> NDArray[Any]:
         """One plane in the type in which it is stored (label numbers do not survive float32)."""
-        for what, value, length in (("frame", t, self.n_frames), ("plane", plane, self.n_planes), ("channel", channel, self.n_channels)):
+        for what, value, length in (
+            ("frame", t, self.n_frames),
+            ("plane", plane, self.n_planes),
+            ("channel", channel, self.n_channels),
+        ):
             if isinstance(value, bool) or not isinstance(value, (int, np.integer)) or not 0 <= value < length:
-                raise InputError(f"there is no {what} {value}; the file has {length}", code=f"no-such-{what}",
-                                 file=self.path, remedy=f"write a number from 0 to {length - 1}")  # fmt: skip
+                raise InputError(
+                    f"there is no {what} {value}; the file has {length}",
+                    code=f"no-such-{what}",
+                    file=self.path,
+                    remedy=f"write a number from 0 to {length - 1}",
+                )
         position = {"T": int(t), "Z": int(plane), "C": int(channel)}
         return self.source.read(tuple(position.get(axis, 0) for axis in self.axes[:-2]))
 
@@ -125,8 +137,12 @@ class BeadStack:
         """Number of the plane with the largest :func:`focus_measure`; the first of equals."""
         scores = [focus_measure(self._plane(t, z, channel)) for z in range(self.n_planes)]
         if not any(math.isfinite(score) for score in scores):
-            raise MeasurementError("no plane has finite pixels, so none is sharpest", code="not-finite", file=self.path,
-                                   remedy="name the plane in column z, or export the stack again")  # fmt: skip
+            raise MeasurementError(
+                "no plane has finite pixels, so none is sharpest",
+                code="not-finite",
+                file=self.path,
+                remedy="name the plane in column z, or export the stack again",
+            )
         return int(np.nanargmax(scores))
 
     def _plane(self, t: int, z: int, c: int) -> NDArray[np.float32]:
@@ -209,13 +225,21 @@ def _name_axes(path: str, declared: str, sizes: tuple[int, ...], given: str | No
         letters = letters.removesuffix("YX")
         if len(letters) != len(declared) or len(set(letters)) != len(letters) or not set(letters) <= set("TZC"):
             stack = " x ".join(map(str, sizes)) or "a single plane"
-            raise InputError(f"axes '{given}' do not name this stack ({stack} before rows and columns)", code="unknown-axes",
-                             file=path, remedy=f"give {len(declared)} different letters of T, Z and C")  # fmt: skip
+            raise InputError(
+                f"axes '{given}' do not name this stack ({stack} before rows and columns)",
+                code="unknown-axes",
+                file=path,
+                remedy=f"give {len(declared)} different letters of T, Z and C",
+            )
         return letters, sizes
     if not set(declared) <= set("TZC") or len(set(declared)) != len(declared):
         stack = " x ".join(map(str, sizes))
-        raise InputError(f"the file does not say what its {stack} planes are (time, height or channel)", code="unnamed-axis",
-                         file=path, remedy="save it with named axes (in ImageJ: Image > Properties), or name them")  # fmt: skip
+        raise InputError(
+            f"the file does not say what its {stack} planes are (time, height or channel)",
+            code="unnamed-axis",
+            file=path,
+            remedy="save it with named axes (in ImageJ: Image > Properties), or name them",
+        )
     return declared, sizes
 
 
@@ -229,8 +253,12 @@ def matching_shape(stressed: BeadStack, relaxed: BeadStack) -> tuple[int, int]:
     """
     if stressed.shape != relaxed.shape:
         sizes = [f"{s.shape[1]} x {s.shape[0]}" for s in (stressed, relaxed)]
-        raise InputError(f"the stressed image has {sizes[0]} pixels and the relaxed one {sizes[1]}", code="shape-mismatch",
-                         file=relaxed.path, remedy="use the same camera region for both")  # fmt: skip
+        raise InputError(
+            f"the stressed image has {sizes[0]} pixels and the relaxed one {sizes[1]}",
+            code="shape-mismatch",
+            file=relaxed.path,
+            remedy="use the same camera region for both",
+        )
     return stressed.shape
 
 
@@ -247,23 +275,39 @@ def resolve_pixel_size(stacks: Sequence[BeadStack], sheet_value: float | None = 
         x, y = stack.pixel_size, stack.pixel_size_y
         if x is not None and y is not None:
             if abs(x - y) > _SQUARE * max(x, y):
-                raise InputError(f"the pixels are not square ({x * 1e6:.6g} um x {y * 1e6:.6g} um)", code="non-square-pixels",
-                                 file=stack.path, remedy="correct the calibration, or resample to square pixels")  # fmt: skip
+                raise InputError(
+                    f"the pixels are not square ({x * 1e6:.6g} um x {y * 1e6:.6g} um)",
+                    code="non-square-pixels",
+                    file=stack.path,
+                    remedy="correct the calibration, or resample to square pixels",
+                )
             found.append((stack.path, x))
     low, high = meta.PLAUSIBLE_PIXEL
     if sheet_value is not None:
         if not (math.isfinite(sheet_value) and low <= sheet_value <= high):
-            raise InputError(f"a pixel of {sheet_value * 1e6:.6g} um cannot be", code="implausible-pixel-size",
-                             column="pixel", remedy="give the size of one pixel on the gel, for instance '0.2 um'")  # fmt: skip
+            raise InputError(
+                f"a pixel of {sheet_value * 1e6:.6g} um cannot be",
+                code="implausible-pixel-size",
+                column="pixel",
+                remedy="give the size of one pixel on the gel, for instance '0.2 um'",
+            )
         found.append(("the cell sheet", sheet_value))
     if not found:
-        raise InputError("neither the image nor the sheet gives the pixel size", code="no-pixel-size", column="pixel",
-                         file=stacks[0].path if stacks else "", remedy="fill the column, for instance '0.2 um'")  # fmt: skip
+        raise InputError(
+            "neither the image nor the sheet gives the pixel size",
+            code="no-pixel-size",
+            column="pixel",
+            file=stacks[0].path if stacks else "",
+            remedy="fill the column, for instance '0.2 um'",
+        )
     first_name, first = found[0]
     for other_name, other in found[1:]:
         if abs(other - first) > _SAME_PIXEL * min(first, other):
             raise InputError(
                 f"pixel size {first * 1e6:.6g} um here, {other * 1e6:.6g} um in {other_name}",
-                code="pixel-size-conflict", file=first_name, column="pixel",
-                remedy="correct the wrong one; leave the column empty to use the file's")  # fmt: skip
+                code="pixel-size-conflict",
+                file=first_name,
+                column="pixel",
+                remedy="correct the wrong one; leave the column empty to use the file's",
+            )
     return first

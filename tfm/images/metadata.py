@@ -20,12 +20,46 @@ from tfm.units import normalise_unit
 __all__ = ["FileMetadata", "from_imagej", "from_ome", "from_resolution_tags", "length_in_m", "time_in_s"]
 
 # Only the units that microscopes write; a table is safer here than a parser that also knows 'light-year' and 'in_Hg'.
-_LENGTHS = {"pm": 1e-12, "angstrom": 1e-10, "å": 1e-10, "nm": 1e-9, "um": 1e-6, "mm": 1e-3, "cm": 1e-2, "m": 1.0,
-            "in": 0.0254, "inch": 0.0254, "inches": 0.0254, "nanometer": 1e-9, "nanometers": 1e-9, "nanometre": 1e-9,
-            "millimeter": 1e-3, "millimetre": 1e-3, "mil": 2.54e-5, "thou": 2.54e-5}  # fmt: skip
-_TIMES = {"ns": 1e-9, "us": 1e-6, "ms": 1e-3, "msec": 1e-3, "s": 1.0, "sec": 1.0, "secs": 1.0, "second": 1.0,
-          "seconds": 1.0, "min": 60.0, "mins": 60.0, "minute": 60.0, "minutes": 60.0, "h": 3600.0, "hr": 3600.0,
-          "hour": 3600.0, "hours": 3600.0, "d": 86400.0}  # fmt: skip
+_LENGTHS = {
+    "pm": 1e-12,
+    "angstrom": 1e-10,
+    "å": 1e-10,
+    "nm": 1e-9,
+    "um": 1e-6,
+    "mm": 1e-3,
+    "cm": 1e-2,
+    "m": 1.0,
+    "in": 0.0254,
+    "inch": 0.0254,
+    "inches": 0.0254,
+    "nanometer": 1e-9,
+    "nanometers": 1e-9,
+    "nanometre": 1e-9,
+    "millimeter": 1e-3,
+    "millimetre": 1e-3,
+    "mil": 2.54e-5,
+    "thou": 2.54e-5,
+}
+_TIMES = {
+    "ns": 1e-9,
+    "us": 1e-6,
+    "ms": 1e-3,
+    "msec": 1e-3,
+    "s": 1.0,
+    "sec": 1.0,
+    "secs": 1.0,
+    "second": 1.0,
+    "seconds": 1.0,
+    "min": 60.0,
+    "mins": 60.0,
+    "minute": 60.0,
+    "minutes": 60.0,
+    "h": 3600.0,
+    "hr": 3600.0,
+    "hour": 3600.0,
+    "hours": 3600.0,
+    "d": 86400.0,
+}
 #: m. Light does not resolve pixels smaller than this, and beads cannot be seen in larger ones: outside, the number
 #: describes a printed page or nothing at all.
 PLAUSIBLE_PIXEL = (1e-9, 2e-5)
@@ -119,13 +153,21 @@ def parse_ome(xml: str, *, file: str = "") -> ElementTree.Element:
         ``ome-metadata`` for text that is no XML or defines entities.
     """
     if "<!DOCTYPE" in xml or "<!ENTITY" in xml:
-        raise InputError("the OME metadata defines entities", code="ome-metadata", file=file,
-                         remedy="save the image again from the microscope's software or from ImageJ")  # fmt: skip
+        raise InputError(
+            "the OME metadata defines entities",
+            code="ome-metadata",
+            file=file,
+            remedy="save the image again from the microscope's software or from ImageJ",
+        )
     try:
         return ElementTree.fromstring(xml.encode("utf-8", "replace"))
     except (ElementTree.ParseError, ValueError, LookupError) as error:
-        raise InputError(f"the OME metadata is damaged ({error})", code="ome-metadata", file=file,
-                         remedy="save the image again from the microscope's software or from ImageJ") from error  # fmt: skip
+        raise InputError(
+            f"the OME metadata is damaged ({error})",
+            code="ome-metadata",
+            file=file,
+            remedy="save the image again from the microscope's software or from ImageJ",
+        ) from error
 
 
 def from_ome(root: ElementTree.Element) -> FileMetadata:
@@ -136,7 +178,8 @@ def from_ome(root: ElementTree.Element) -> FileMetadata:
 
     Examples
     --------
-    >>> from_ome(ElementTree.fromstring('<OME><Image><Pixels PhysicalSizeX="200" PhysicalSizeXUnit="nm"/></Image></OME>')).pixel_x
+    >>> pixels = '<Pixels PhysicalSizeX="200" PhysicalSizeXUnit="nm"/>'
+    >>> from_ome(ElementTree.fromstring(f"<OME><Image>{pixels}</Image></OME>")).pixel_x
     2e-07
     """
     pixels = next((e for e in root.iter() if _name(e) == "Pixels"), None)
@@ -189,8 +232,13 @@ def _ratio(value: Any) -> float | None:
         return None
 
 
+def _sizes(x_resolution: Any, y_resolution: Any, unit: Any) -> list[float | None]:
+    ratios = (_ratio(x_resolution), _ratio(y_resolution))
+    return [None if ratio is None else _plausible(length_in_m(1.0 / ratio, unit)) for ratio in ratios]
+
+
 def from_imagej(metadata: Mapping[str, Any], x_resolution: Any, y_resolution: Any) -> FileMetadata:
-    """Scale from ImageJ's description: ``unit`` with pixels per unit in the resolution tags, ``finterval`` and ``tunit``.
+    """Scale from ImageJ's description: ``unit`` (pixels per unit are in the resolution tags), ``finterval``, ``tunit``.
 
     Examples
     --------
@@ -198,9 +246,7 @@ def from_imagej(metadata: Mapping[str, Any], x_resolution: Any, y_resolution: An
     2e-07
     """
     unit = metadata.get("unit")
-    sizes = []
-    for ratio in (_ratio(x_resolution), _ratio(y_resolution)):
-        sizes.append(None if ratio is None else _plausible(length_in_m(1.0 / ratio, unit)))
+    sizes = _sizes(x_resolution, y_resolution, unit)
     interval = time_in_s(metadata.get("finterval"), metadata.get("tunit", "s"))
     if interval is None and (rate := _finite_positive(metadata.get("fps"))) is not None:
         interval = float(f"{1.0 / rate:.15g}")
@@ -226,9 +272,7 @@ def from_resolution_tags(x_resolution: Any, y_resolution: Any, unit: Any) -> Fil
         name = {2: "inch", 3: "cm", 4: "mm", 5: "um"}.get(int(unit))
     except (TypeError, ValueError):
         name = None
-    sizes = []
-    for ratio in (_ratio(x_resolution), _ratio(y_resolution)):
-        sizes.append(None if ratio is None else _plausible(length_in_m(1.0 / ratio, name)))
+    sizes = _sizes(x_resolution, y_resolution, name)
     return FileMetadata(
         pixel_x=sizes[0],
         pixel_y=sizes[1] if sizes[1] is not None else sizes[0],

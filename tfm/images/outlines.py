@@ -50,8 +50,12 @@ class OutlineStack:
         if self._fixed is not None:
             return self._fixed
         if self._stack is None or not 0 <= frame < self.n_frames:
-            raise InputError(f"there is no outline for frame {frame}; the file has {self.n_frames}", code="no-such-frame",
-                             file=self._stack.path if self._stack else "", remedy="give one label image per stressed frame")  # fmt: skip
+            raise InputError(
+                f"there is no outline for frame {frame}; the file has {self.n_frames}",
+                code="no-such-frame",
+                file=self._stack.path if self._stack else "",
+                remedy="give one label image per stressed frame",
+            )
         plain = _frame_outlines(self._stack, frame, self._shape, self.source)
         mapping = self._mappings[frame]
         notes = {mapping[cell]: sentences for cell, sentences in plain.cell_notes.items()}
@@ -64,7 +68,8 @@ def read_outlines(text: str, shape: tuple[int, int], *, base: str | os.PathLike[
     Parameters
     ----------
     text
-        Path of a label TIFF, a GeoJSON file, an ImageJ ``.roi`` or ``.zip``, or ``auto:`` and the path of an image of the cells.
+        Path of a label TIFF, a GeoJSON file, an ImageJ ``.roi`` or ``.zip``, or ``auto:`` and the path of an image of
+        the cells.
     shape
         ``(ny, nx)`` of the bead image.
     base
@@ -102,7 +107,9 @@ def read_outline_stack(
     automatic = entry.startswith("auto:")
     path = Path(base) / (entry.removeprefix("auto:").strip() if automatic else entry)
     if automatic and path == Path(base):
-        raise InputError("'auto:' names no image", code="outline-format", remedy="write auto: and the image of the cells")
+        raise InputError(
+            "'auto:' names no image", code="outline-format", remedy="write auto: and the image of the cells"
+        )
     regular_file(path, what="image of the cells" if automatic else "outline")
     if automatic or _is_tiff(path):
         stack = open_frames(path) if automatic else open_frames(path, labels=True)
@@ -113,8 +120,12 @@ def read_outline_stack(
     elif data.lstrip(b"\xef\xbb\xbf \t\r\n")[:1] in (b"{", b"["):
         outlines = rasterise(read_geojson(data, file=str(path)), shape, file=str(path), source="polygons")
     else:
-        raise InputError("this is no label TIFF, GeoJSON or ImageJ region", code="outline-format", file=str(path),
-                         remedy="save the outlines in one of these formats")  # fmt: skip
+        raise InputError(
+            "this is no label TIFF, GeoJSON or ImageJ region",
+            code="outline-format",
+            file=str(path),
+            remedy="save the outlines in one of these formats",
+        )
     return OutlineStack(1, outlines.source, _with_cell_notes(outlines))
 
 
@@ -125,19 +136,31 @@ def _is_tiff(path: Path) -> bool:
 
 def _image_outlines(stack: BeadStack, shape: tuple[int, int], source: str, n_frames: int | None) -> OutlineStack:
     if stack.shape != tuple(shape):
-        raise InputError(f"the outline image has {stack.shape[1]} x {stack.shape[0]} pixels, the bead image {shape[1]} x {shape[0]}",
-                         code="outline-shape", file=stack.path, remedy="draw the outlines on the bead image's own frame")  # fmt: skip
+        raise InputError(
+            f"the outline image has {stack.shape[1]} x {stack.shape[0]} pixels, the bead image {shape[1]} x {shape[0]}",
+            code="outline-shape",
+            file=stack.path,
+            remedy="draw the outlines on the bead image's own frame",
+        )
     if stack.n_channels > 1 or (stack.n_planes > 1 and source == "label image"):
-        raise InputError(f"it has {stack.n_channels} channels and {stack.n_planes} planes", code="outline-format", file=stack.path,
-                         remedy="save one label image, or one per stressed frame with a time axis")  # fmt: skip
+        raise InputError(
+            f"it has {stack.n_channels} channels and {stack.n_planes} planes",
+            code="outline-format",
+            file=stack.path,
+            remedy="save one label image, or one per stressed frame with a time axis",
+        )
     if stack.n_frames == 1:
         return OutlineStack(1, source, _frame_outlines(stack, 0, shape, source))
     if n_frames is not None and stack.n_frames != n_frames:
-        raise InputError(f"it has {stack.n_frames} frames and the stressed stack {n_frames}", code="outline-frames",
-                         file=stack.path, remedy="give one label image, or one per stressed frame")  # fmt: skip
+        raise InputError(
+            f"it has {stack.n_frames} frames and the stressed stack {n_frames}",
+            code="outline-frames",
+            file=stack.path,
+            remedy="give one label image, or one per stressed frame",
+        )
     follower = LabelFollower()
     mappings = tuple(follower.step(_frame_outlines(stack, t, shape, source).labels) for t in range(stack.n_frames))
-    return OutlineStack(stack.n_frames, source, None, stack, tuple(shape), mappings)
+    return OutlineStack(stack.n_frames, source, None, stack, (int(shape[0]), int(shape[1])), mappings)
 
 
 def _frame_outlines(stack: BeadStack, t: int, shape: tuple[int, int], source: str) -> Outlines:
@@ -150,23 +173,40 @@ def _frame_outlines(stack: BeadStack, t: int, shape: tuple[int, int], source: st
 def _as_labels(values: NDArray[Any], file: str) -> NDArray[np.int32]:
     remedy = "save 0 for no cell and 1, 2, 3, ... for the cells"
     if values.dtype.kind == "f" and not (np.isfinite(values).all() and np.array_equal(values, np.round(values))):
-        raise InputError("the label image holds numbers that are not whole", code="outline-labels", file=file, remedy=remedy)
+        raise InputError(
+            "the label image holds numbers that are not whole", code="outline-labels", file=file, remedy=remedy
+        )
     low, high = values.min(), values.max()
     if low < 0 or high >= 2**31:
-        raise InputError(f"the label image holds the number {low if low < 0 else high:g}", code="outline-labels", file=file, remedy=remedy)
+        raise InputError(
+            f"the label image holds the number {low if low < 0 else high:g}",
+            code="outline-labels",
+            file=file,
+            remedy=remedy,
+        )
     if high == 0:
-        raise InputError("the label image is empty: no pixel belongs to a cell", code="no-outline", file=file, remedy=remedy)
+        raise InputError(
+            "the label image is empty: no pixel belongs to a cell", code="no-outline", file=file, remedy=remedy
+        )
     present = np.unique(values)
     if values.dtype.kind == "b" or (values.dtype == np.uint8 and present.tolist() in ([0, 255], [255])):
         # A black and white mask says where cells are, not which is which.
         labels, count = ndimage.label(values, structure=np.ones((3, 3)))
         if count > 1:
-            raise InputError(f"this is a black and white mask with {count} areas, not a label image", code="outline-labels", file=file,
-                             remedy="give each cell its own number (in ImageJ: Analyze Particles, show Count Masks)")  # fmt: skip
+            raise InputError(
+                f"this is a black and white mask with {count} areas, not a label image",
+                code="outline-labels",
+                file=file,
+                remedy="give each cell its own number (in ImageJ: Analyze Particles, show Count Masks)",
+            )
         return np.asarray(labels, dtype=np.int32)
     if present.size > 5000:
-        raise MeasurementError(f"the label image holds {present.size} numbers: is it a grey image?", code="outline-labels",
-                               file=file, remedy="write auto: before the path of a grey image")  # fmt: skip
+        raise MeasurementError(
+            f"the label image holds {present.size} numbers: is it a grey image?",
+            code="outline-labels",
+            file=file,
+            remedy="write auto: before the path of a grey image",
+        )
     return values.astype(np.int32)
 
 

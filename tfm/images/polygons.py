@@ -1,7 +1,7 @@
 """Outlines drawn by hand: GeoJSON polygons and ImageJ regions, as label images.
 
-Both end as rings in our frame (origin at the **centre** of pixel (0, 0)). A pixel belongs to a cell when its centre lies
-inside the cell's outer ring and outside its holes.
+Both end as rings in our frame (origin at the **centre** of pixel (0, 0)). A pixel belongs to a cell when its centre
+lies inside the cell's outer ring and outside its holes.
 """
 
 from __future__ import annotations
@@ -14,13 +14,14 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from skimage.draw import polygon as fill_polygon
+from skimage import draw
 
 from tfm.errors import InputError
 from tfm.images.model import Outlines
 
-__all__ = ["Shape", "read_geojson", "rasterise"]
+__all__ = ["Shape", "rasterise", "read_geojson"]
 
+_fill_polygon: Any = draw.polygon  # the library declares no types
 Ring = NDArray[np.float64]
 #: Pixels. Larger coordinates are no position in an image.
 _FAR = 1e6
@@ -55,8 +56,12 @@ def read_geojson(data: bytes, *, file: str) -> list[Shape]:
     try:
         document = json.loads(data.decode("utf-8-sig"), parse_constant=_no_constant)
     except (ValueError, RecursionError) as error:
-        raise InputError(f"this is not GeoJSON ({_one_line(error)})", code="geojson", file=file,
-                         remedy="export the outlines again as GeoJSON in UTF-8") from error  # fmt: skip
+        raise InputError(
+            f"this is not GeoJSON ({_one_line(error)})",
+            code="geojson",
+            file=file,
+            remedy="export the outlines again as GeoJSON in UTF-8",
+        ) from error
     shapes = []
     for number, (feature, geometry) in enumerate(_geometries(document, file), start=1):
         where = f"outline {number}"
@@ -67,9 +72,15 @@ def read_geojson(data: bytes, *, file: str) -> list[Shape]:
         elif kind == "MultiPolygon" and isinstance(coordinates, list):
             parts = coordinates
         else:
-            raise InputError(f"{where} is a {str(kind)[:40]}, not an area", code="not-an-area", file=file,
-                             remedy="keep only Polygon and MultiPolygon")  # fmt: skip
-        rings = tuple(tuple(_ring(ring, where, file) for ring in _list(part, where, file)) for part in _list(parts, where, file))
+            raise InputError(
+                f"{where} is a {str(kind)[:40]}, not an area",
+                code="not-an-area",
+                file=file,
+                remedy="keep only Polygon and MultiPolygon",
+            )
+        rings = tuple(
+            tuple(_ring(ring, where, file) for ring in _list(part, where, file)) for part in _list(parts, where, file)
+        )
         shapes.append(Shape(where, rings, _label(feature)))
     if not shapes:
         raise InputError("the file holds no outline", code="no-outline", file=file, remedy="draw at least one cell")
@@ -96,15 +107,23 @@ def _geometries(document: Any, file: str) -> list[tuple[dict[str, Any], dict[str
         items = document.get("features")
     elif isinstance(document, list):
         items = document
-    found = []
+    found: list[tuple[dict[str, Any], dict[str, Any]]] = []
     for item in items if isinstance(items, list) else [None]:
         geometry = item.get("geometry") if isinstance(item, dict) and item.get("type") == "Feature" else item
-        if not isinstance(geometry, dict) or "type" not in geometry:
-            raise InputError("it holds something that is no feature with a geometry", code="geojson", file=file,
-                             remedy="export the outlines again as GeoJSON")  # fmt: skip
+        if not isinstance(item, dict) or not isinstance(geometry, dict) or "type" not in geometry:
+            raise InputError(
+                "it holds something that is no feature with a geometry",
+                code="geojson",
+                file=file,
+                remedy="export the outlines again as GeoJSON",
+            )
         if geometry["type"] == "GeometryCollection":
-            raise InputError("it holds a GeometryCollection", code="geojson", file=file,
-                             remedy="export one Polygon or MultiPolygon per cell")  # fmt: skip
+            raise InputError(
+                "it holds a GeometryCollection",
+                code="geojson",
+                file=file,
+                remedy="export one Polygon or MultiPolygon per cell",
+            )
         found.append((item, geometry))
     return found
 
@@ -124,16 +143,21 @@ def _ring(points: Any, where: str, file: str) -> Ring:
     try:
         ring = np.array([[float(point[0]), float(point[1])] for point in points], dtype=np.float64).reshape(-1, 2)
     except (TypeError, ValueError, IndexError, KeyError, OverflowError) as error:
-        raise InputError(f"{where} has a point that is no pair of numbers", code="bad-polygon", file=file,
-                         remedy="draw it again") from error  # fmt: skip
+        raise InputError(
+            f"{where} has a point that is no pair of numbers", code="bad-polygon", file=file, remedy="draw it again"
+        ) from error
     return check_ring(ring, where, file)
 
 
 def check_ring(ring: Ring, where: str, file: str) -> Ring:
     """The ring without its closing point and repeated points, when it encloses an area and does not cross itself."""
     if not np.isfinite(ring).all() or (ring.size and np.abs(ring).max() > _FAR):
-        raise InputError(f"{where} has a point far outside any image", code="bad-polygon", file=file,
-                         remedy="give coordinates in pixels")  # fmt: skip
+        raise InputError(
+            f"{where} has a point far outside any image",
+            code="bad-polygon",
+            file=file,
+            remedy="give coordinates in pixels",
+        )
     if len(ring) > 1:
         ring = ring[np.any(ring != np.roll(ring, 1, axis=0), axis=1)]
     x, y = ring.T if len(ring) else (np.empty(0), np.empty(0))
@@ -142,8 +166,12 @@ def check_ring(ring: Ring, where: str, file: str) -> Ring:
         raise InputError(f"{where} encloses no area", code="bad-polygon", file=file, remedy="draw it again")
     crossing = first_crossing(ring)
     if crossing is not None:
-        raise InputError(f"{where} crosses itself near x = {crossing[0]:.1f}, y = {crossing[1]:.1f} px", code="bad-polygon",
-                         file=file, remedy="draw it again without a loop")  # fmt: skip
+        raise InputError(
+            f"{where} crosses itself near x = {crossing[0]:.1f}, y = {crossing[1]:.1f} px",
+            code="bad-polygon",
+            file=file,
+            remedy="draw it again without a loop",
+        )
     return ring
 
 
@@ -185,7 +213,7 @@ def shape_mask(shape: Shape, size: tuple[int, int]) -> NDArray[np.bool_]:
 
 def _fill(ring: Ring, size: tuple[int, int]) -> NDArray[np.bool_]:
     mask = np.zeros(size, dtype=bool)
-    rows, columns = fill_polygon(ring[:, 1], ring[:, 0], size)
+    rows, columns = _fill_polygon(ring[:, 1], ring[:, 0], size)
     mask[rows, columns] = True
     return mask
 
@@ -203,8 +231,12 @@ def rasterise(shapes: Sequence[Shape], size: tuple[int, int], *, file: str, sour
     """
     given = [shape.label for shape in shapes]
     if any(label is not None for label in given) and (None in given or len(set(given)) < len(given)):
-        raise InputError("some outlines carry a number and others do not, or a number is used twice", code="outline-numbers",
-                         file=file, remedy="number all outlines differently, or none")  # fmt: skip
+        raise InputError(
+            "some outlines carry a number and others do not, or a number is used twice",
+            code="outline-numbers",
+            file=file,
+            remedy="number all outlines differently, or none",
+        )
     labels = np.zeros(size, dtype=np.int32)
     notes: dict[int, tuple[str, ...]] = {}
     areas: dict[int, int] = {}
@@ -215,15 +247,26 @@ def rasterise(shapes: Sequence[Shape], size: tuple[int, int], *, file: str, sour
         if area == 0:
             outside = all(_outside(rings[0], size) for rings in shape.parts)
             detail = f"lies outside the image of {size[1]} x {size[0]} pixels" if outside else "covers no pixel"
-            raise InputError(f"{shape.name} {detail}", code="outline-outside" if outside else "bad-polygon", file=file,
-                             remedy="give coordinates in pixels of the bead image")  # fmt: skip
+            raise InputError(
+                f"{shape.name} {detail}",
+                code="outline-outside" if outside else "bad-polygon",
+                file=file,
+                remedy="give coordinates in pixels of the bead image",
+            )
         shared = mask & (labels > 0)
         for other in np.unique(labels[shared]):
             common = int(np.count_nonzero(shared & (labels == other)))
             if common > _OVERLAP * min(area, areas[int(other)]):
-                raise InputError(f"{shape.name} overlaps cell {other} by {common} pixels", code="outline-overlap", file=file,
-                                 remedy="draw the cells side by side")  # fmt: skip
-            notes[label] = (*notes.get(label, ()), f"outline overlapped cell {other} by {common} pixels, which that cell keeps")
+                raise InputError(
+                    f"{shape.name} overlaps cell {other} by {common} pixels",
+                    code="outline-overlap",
+                    file=file,
+                    remedy="draw the cells side by side",
+                )
+            notes[label] = (
+                *notes.get(label, ()),
+                f"outline overlapped cell {other} by {common} pixels, which that cell keeps",
+            )
         labels[mask & (labels == 0)] = label
         areas[label] = area
     return Outlines(labels, source, (), notes)

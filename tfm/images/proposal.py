@@ -1,27 +1,30 @@
 """An outline guessed from the displacement itself, for fields where nobody drew one.
 
-Displacement reaches far beyond the cell (it falls as 1/r^2), so its size alone says little about where the cell is. On a
-gel, traction is to displacement as k in Fourier space (u_L = (1 - nu)/(G k) T_L, u_T = 1/(G k) T_T; Landau & Lifshitz,
-Theory of Elasticity, sec. 8), and **that** is local: |k| u, smoothed as far as the noise demands, stands where the cell
-pulls. Stiffness only scales it; for the ratio of the two factors a nearly incompressible gel is assumed. It serves to
-find the place and is never used as a traction.
+Displacement reaches far beyond the cell (it falls as 1/r^2), so its size alone says little about where the cell is. On
+a gel, traction is to displacement as k in Fourier space (u_L = (1 - nu)/(G k) T_L, u_T = 1/(G k) T_T; Landau &
+Lifshitz, Theory of Elasticity, sec. 8), and **that** is local: |k| u, smoothed as far as the noise demands, stands
+where the cell pulls. Stiffness only scales it; for the ratio of the two factors a nearly incompressible gel is assumed.
+It serves to find the place and is never used as a traction.
 """
 
 from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import fft, ndimage
 from scipy.spatial import ConvexHull
-from skimage.draw import polygon as fill_polygon
+from skimage import draw
 
 from tfm.errors import InputError, MeasurementError
 from tfm.images.model import Outlines
 
 __all__ = ["propose_outline"]
+
+_fill_polygon: Any = draw.polygon  # the library declares no types
 
 Field = NDArray[np.float64]
 
@@ -80,10 +83,13 @@ def propose_outline(
         ``no-displacement`` when nothing rises above the noise.
     """
     spacing = _spacing(u, x, y)
-    valid = np.isfinite(u).all(axis=0)
+    valid: NDArray[np.bool_] = np.asarray(np.isfinite(u).all(axis=0))
     if np.count_nonzero(valid) < 0.2 * valid.size:
-        raise MeasurementError("too few displacements were measured to propose an outline", code="no-displacement",
-                               remedy="draw the outline")  # fmt: skip
+        raise MeasurementError(
+            "too few displacements were measured to propose an outline",
+            code="no-displacement",
+            remedy="draw the outline",
+        )
     filled = np.stack([_fill_gaps(component, valid) for component in u])
     overlap = 1.0 if independent_area is None else max(1.0, independent_area / spacing**2)
     pull, width, sd = _local_pull(filled, noise if math.isfinite(noise) else 0.0, overlap)
@@ -102,18 +108,26 @@ def propose_outline(
 
 
 def _nothing() -> MeasurementError:
-    return MeasurementError("no displacement rises above the noise, so no outline can be proposed", code="no-displacement",
-                            remedy="draw the outline, or check that the cells pull in this field")  # fmt: skip
+    return MeasurementError(
+        "no displacement rises above the noise, so no outline can be proposed",
+        code="no-displacement",
+        remedy="draw the outline, or check that the cells pull in this field",
+    )
 
 
 def _spacing(u: Field, x: Field, y: Field) -> float:
     if u.ndim != 3 or u.shape != (2, y.size, x.size) or min(x.size, y.size) < 8:
-        raise InputError(f"a displacement of shape {u.shape} on {y.size} x {x.size} positions", code="displacement-grid",
-                         remedy="give u as (2, ny, nx) on a grid of at least 8 x 8")  # fmt: skip
+        raise InputError(
+            f"a displacement of shape {u.shape} on {y.size} x {x.size} positions",
+            code="displacement-grid",
+            remedy="give u as (2, ny, nx) on a grid of at least 8 x 8",
+        )
     steps = np.concatenate([np.diff(x), np.diff(y)])
     spacing = float(np.median(steps))
     if not spacing > 0 or np.abs(steps - spacing).max() > 0.01 * spacing:
-        raise InputError("the displacement's grid is uneven", code="displacement-grid", remedy="give equal steps in x and y")
+        raise InputError(
+            "the displacement's grid is uneven", code="displacement-grid", remedy="give equal steps in x and y"
+        )
     return spacing
 
 
@@ -239,7 +253,7 @@ def _draw(hulls: list[Field], shape: tuple[int, int], *, margin: float) -> NDArr
     # Cells from the top left, so that the same field always numbers them alike.
     for number, hull in enumerate(sorted(hulls, key=lambda h: (h[:, 1].mean(), h[:, 0].mean())), start=1):
         inside = np.zeros(shape, dtype=bool)
-        rows, columns = fill_polygon(hull[:, 1], hull[:, 0], shape)
+        rows, columns = _fill_polygon(hull[:, 1], hull[:, 0], shape)
         inside[rows, columns] = True
         if not inside.any():
             continue

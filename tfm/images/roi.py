@@ -40,7 +40,9 @@ def read_roi(data: bytes, *, file: str) -> list[Shape]:
     shapes, positions = [], set()
     for name, content in entries:
         if content[:4] != b"Iout":
-            raise InputError(f"{name} is not an ImageJ region", code="roi", file=file, remedy="save it from ImageJ's ROI Manager")
+            raise InputError(
+                f"{name} is not an ImageJ region", code="roi", file=file, remedy="save it from ImageJ's ROI Manager"
+            )
         with guarded(file, what="region file", logger="roifile"):
             import roifile
 
@@ -49,21 +51,31 @@ def read_roi(data: bytes, *, file: str) -> list[Shape]:
             positions.add((int(roi.position), int(roi.t_position)))
     positions.discard((0, 0))
     if len(positions) > 1:
-        raise InputError("the regions belong to different slices or frames", code="several-frames", file=file,
-                         remedy="remove their positions in the ROI Manager, or give a label stack")  # fmt: skip
+        raise InputError(
+            "the regions belong to different slices or frames",
+            code="several-frames",
+            file=file,
+            remedy="remove their positions in the ROI Manager, or give a label stack",
+        )
     return shapes
 
 
 def _unzip(data: bytes, file: str) -> list[tuple[str, bytes]]:
     with guarded(file, what="zip of regions", logger="roifile"), zipfile.ZipFile(io.BytesIO(data)) as archive:
-        members = [m for m in archive.infolist() if m.filename.lower().endswith(".roi") and "__MACOSX" not in m.filename]
+        members = [
+            m for m in archive.infolist() if m.filename.lower().endswith(".roi") and "__MACOSX" not in m.filename
+        ]
         if not members:
             raise InputError("the zip holds no .roi", code="roi", file=file, remedy="save it from ImageJ's ROI Manager")
         if len(members) > _MAX_COUNT or any(m.file_size > _MAX_ROI for m in members):
-            raise InputError("the zip holds more than outlines", code="too-large", file=file,
-                             remedy="keep only the cells' regions in it")  # fmt: skip
+            raise InputError(
+                "the zip holds more than outlines",
+                code="too-large",
+                file=file,
+                remedy="keep only the cells' regions in it",
+            )
         # read(n) stops at n bytes, whatever the entry unpacks to.
-        found = []
+        found: list[tuple[str, bytes]] = []
         for member in members:
             with archive.open(member) as handle:
                 found.append((f"region {len(found) + 1} ({member.filename[-60:]})", handle.read(_MAX_ROI)))
@@ -73,8 +85,12 @@ def _unzip(data: bytes, file: str) -> list[tuple[str, bytes]]:
 def _shape(roi: Any, name: str, file: str) -> Shape:
     kind = int(roi.roitype)
     if kind not in _AREAS:
-        raise InputError(f"{name} is a {_OTHERS.get(kind, 'region of an unknown kind')}, not an area", code="not-an-area",
-                         file=file, remedy="outline the cell with the polygon, freehand or wand tool")  # fmt: skip
+        raise InputError(
+            f"{name} is a {_OTHERS.get(kind, 'region of an unknown kind')}, not an area",
+            code="not-an-area",
+            file=file,
+            remedy="outline the cell with the polygon, freehand or wand tool",
+        )
     if roi.multi_coordinates is not None and roi.composite:
         rings = [np.asarray(ring, dtype=np.float64).reshape(-1, 2) for ring in roi.coordinates(multi=True)]
         checked = tuple(check_ring(ring - 0.5, name, file) for ring in rings if len(ring) > 2)
