@@ -6,7 +6,7 @@ from tfm.synth.beads import Beads, Camera, expected_photons, make_bead_image, ma
 from tfm.synth.cells import SyntheticCell, lattice_axis, make_cell_traction, make_outline
 from tfm.synth.demo import DEMO_SEED, write_demo
 from tfm.synth.fields import SyntheticField, cell_displacements, make_bead_images, make_field
-from tfm.synth.forward import displacement_at, node_mean, surface_displacement
+from tfm.synth.forward import displacement_at, lattice_work, surface_displacements
 from tfm.synth.random_fields import random_cells, random_field, random_gel
 
 __all__ = [
@@ -19,16 +19,16 @@ __all__ = [
     "displacement_at",
     "expected_photons",
     "lattice_axis",
+    "lattice_work",
     "make_bead_image",
     "make_bead_images",
     "make_beads",
     "make_cell_traction",
     "make_field",
     "make_outline",
-    "node_mean",
     "random_cells",
     "random_field",
     "random_gel",
-    "surface_displacement",
+    "surface_displacements",
     "write_demo",
 ]

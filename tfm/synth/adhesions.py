@@ -61,7 +61,7 @@ def adhesion_forces(
 def patches(
     x: NDArray[np.float64],
     y: NDArray[np.float64],
-    inside: NDArray[np.bool_],
+    inside: NDArray[np.float64],
     places: NDArray[np.float64],
     forces: NDArray[np.float64],
     centroid: NDArray[np.float64],
@@ -71,12 +71,12 @@ def patches(
     applied = np.zeros_like(forces)
     traction = np.zeros((2, len(y), len(x)))
     weight = np.zeros((len(y), len(x)))
-    areas = rng.uniform(1.0e-12, 8.0e-12, len(places))
+    areas = rng.uniform(1.5e-12, 8.0e-12, len(places))
     for number, ((px, py), pull, area) in enumerate(zip(places, forces, areas, strict=True)):
         # A larger adhesion carries more force: the stress on it is what cells keep alike (common practice).
-        force, stretch = pull * area, rng.uniform(1.2, 2.5)
-        # The profile (1 - r^2)^2 reaches zero smoothly; its edge lies at 1.5 times the radius of the quoted area.
-        minor = 1.5 * np.sqrt(area / (np.pi * stretch))
+        force, stretch = pull * area, rng.uniform(1.2, 2.0)
+        # The profile (1 - r^2)^2 falls to half where r^2 = 1 - 1/sqrt(2); that contour encloses the quoted area.
+        minor = np.sqrt(area / (np.pi * stretch * (1 - np.sqrt(0.5))))
         major = minor * stretch
         theta = np.arctan2(py - centroid[1], px - centroid[0])
         cols = np.flatnonzero(np.abs(x - px) <= major)

@@ -1,7 +1,7 @@
 """Invented adherent cells: an outline, adhesions near its rim, and a traction that balances exactly.
 
-The traction lives on a lattice of square nodes that is finer than any inversion uses, and every true number (dipole,
-force, torque) is a sum over those nodes, so it is exact for the traction that displaces the beads.
+The traction is bilinear on a lattice that is finer than any inversion uses, and every true number (dipole, force,
+torque) is a sum over its nodes, which is exact for the traction that displaces the beads.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.ndimage import distance_transform_edt, map_coordinates
 from skimage import draw
 
 from tfm.errors import InputError
@@ -28,7 +29,8 @@ class SyntheticCell:
     Attributes
     ----------
     traction
-        ``(2, ny, nx)`` Pa on square nodes of edge ``spacing``; force per area that the cell applies to the gel.
+        ``(2, ny, nx)`` Pa at the nodes of a square lattice, bilinear in between; force per area that the cell applies
+        to the gel.
     mask
         ``(rows, columns)`` bool on the image's pixels: inside the outline.
     polygon
@@ -206,7 +208,12 @@ def make_cell_traction(
     x = lattice_axis(shape_px[1], pixel_size, spacing_px)
     y = lattice_axis(shape_px[0], pixel_size, spacing_px)
     spacing = spacing_px * pixel_size
-    inside = mask[np.rint(y / pixel_size).astype(int).clip(0)][:, np.rint(x / pixel_size).astype(int).clip(0)]
+    # The pull fades to nothing over the last 0.8 um before the rim: a traction that jumps would need finer nodes.
+    depth = distance_transform_edt(mask) * pixel_size
+    fade = np.clip((depth - 0.5 * pixel_size) / 0.8e-6, 0.0, 1.0)
+    fade = fade * fade * (3 - 2 * fade)
+    grid = np.meshgrid(np.round(y / pixel_size, 9), np.round(x / pixel_size, 9), indexing="ij")
+    inside = map_coordinates(fade, grid, order=1, mode="nearest")
     count = int(rng.integers(14, 31)) if adhesions is None else adhesions
     places = adhesion_places(polygon * pixel_size, centroid, angle, count, polarity, rng)
     forces = adhesion_forces(places, centroid, angle, anisotropy, polarity, rng)
@@ -233,7 +240,7 @@ def _dipole(
     centroid: NDArray[np.float64],
     spacing: float,
 ) -> NDArray[np.float64]:
-    """xx, xy, yy of the symmetric first moment; exact, because a uniform square has its first moment at its centre."""
+    """xx, xy, yy of the symmetric first moment; exact for a traction bilinear between nodes."""
     dx, dy = x[None, :] - centroid[0], y[:, None] - centroid[1]
     area = spacing**2
     return np.array(

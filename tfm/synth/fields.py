@@ -13,7 +13,7 @@ from tfm.errors import InputError
 from tfm.gel import Gel
 from tfm.synth.beads import Beads, Camera, expected_photons, make_bead_image, make_beads
 from tfm.synth.cells import SyntheticCell
-from tfm.synth.forward import displacement_at, node_mean, surface_displacement
+from tfm.synth.forward import displacement_at, lattice_work, surface_displacements
 
 __all__ = ["SyntheticField", "cell_displacements", "make_bead_images", "make_field"]
 
@@ -74,11 +74,10 @@ class SyntheticField:
 
 def cell_displacements(cells: Sequence[SyntheticCell], gel: Gel, *, margin_px: int = 16) -> list[NDArray[np.float64]]:
     """Displacement (m) of every cell alone on its lattice, which reaches ``margin_px`` beyond the image."""
-    out = []
-    for cell in cells:
-        margin = round(margin_px * cell.pixel_size / cell.spacing)
-        out.append(surface_displacement(cell.traction, cell.spacing, gel, margin=margin))
-    return out
+    if not cells:
+        return []
+    margin = round(margin_px * cells[0].pixel_size / cells[0].spacing)
+    return surface_displacements([cell.traction for cell in cells], cells[0].spacing, gel, margin=margin)
 
 
 def make_bead_images(
@@ -251,13 +250,13 @@ def make_field(
 def _energies(
     cells: Sequence[SyntheticCell], alone: Sequence[NDArray[np.float64]]
 ) -> tuple[NDArray[np.float64], dict[tuple[int, int], float]]:
-    """Strain energy per cell (with the whole field's u) and W_ab for every pair, from node means of u."""
+    """Strain energy per cell (with the whole field's u) and W_ab for every pair."""
     work = np.zeros((len(cells), len(cells)))
     for b, u in enumerate(alone):
         cut = (u.shape[1] - cells[b].traction.shape[1]) // 2
-        mean = node_mean(u)[:, cut : u.shape[1] - cut, cut : u.shape[2] - cut]
+        inner = u[:, cut : u.shape[1] - cut, cut : u.shape[2] - cut]
         for a, cell in enumerate(cells):
-            work[a, b] = float((cell.traction * mean).sum()) * cell.spacing**2
-    pairs = {(a + 1, b + 1): work[a, b] for a in range(len(cells)) for b in range(a + 1, len(cells))}
+            work[a, b] = lattice_work(cell.traction, inner, cell.spacing)
+    pairs = {(a + 1, b + 1): float(work[a, b]) for a in range(len(cells)) for b in range(a + 1, len(cells))}
     energies: NDArray[np.float64] = 0.5 * work.sum(axis=1)
     return energies, pairs

@@ -1,64 +1,53 @@
-"""Traction to displacement, and displacement at beads between lattice points."""
+"""Traction to displacement at points, and at beads between lattice points."""
 
 from __future__ import annotations
 
 import numpy as np
-import scipy.fft
 from numpy.typing import NDArray
 from scipy.interpolate import RectBivariateSpline
 
-from tfm.gel import Gel, node_kernel
+from tfm.gel import Gel, SurfaceOperator
 
-__all__ = ["displacement_at", "node_mean", "surface_displacement"]
+__all__ = ["displacement_at", "lattice_work", "surface_displacements"]
 
 
-def surface_displacement(
-    traction: NDArray[np.float64], spacing: float, gel: Gel, *, margin: int = 0
-) -> NDArray[np.float64]:
-    """Displacement (m) at the node centres of a lattice that reaches ``margin`` nodes beyond the traction's.
+def surface_displacements(
+    tractions: list[NDArray[np.float64]], spacing: float, gel: Gel, *, margin: int = 0
+) -> list[NDArray[np.float64]]:
+    """Displacement (m) **at the node centres** of a lattice that reaches ``margin`` nodes beyond each traction's.
 
-    u_i(r) = sum over nodes of K_ij(r - r') T_j(r'), with every node's traction uniform over its square and the lattice
-    aperiodic: zero-padded FFT, exact to rounding for the kernel given.
+    The traction is **bilinear** between the nodes, the lattice aperiodic, and the result exact to rounding: a bilinear
+    field is the box of a node convolved with itself, so its displacement at a node is what the gel's kernel gives as
+    the mean over a node of a uniform node's displacement.
 
     Parameters
     ----------
-    traction
-        ``(2, ny, nx)`` Pa.
+    tractions
+        Each ``(2, ny, nx)`` Pa, all on the same lattice.
     spacing
         m, edge of a node.
 
     Returns
     -------
-    ``(2, ny + 2 margin, nx + 2 margin)`` m.
+    For each, ``(2, ny + 2 margin, nx + 2 margin)`` m.
     """
-    padded = np.pad(traction, ((0, 0), (margin, margin), (margin, margin)))
-    ny, nx = padded.shape[1:]
-    size = (scipy.fft.next_fast_len(2 * ny - 1, real=True), scipy.fft.next_fast_len(2 * nx - 1, real=True))
-    kernel = node_kernel(gel, (ny, nx), spacing)
-    sources = scipy.fft.rfft2(padded, size)
-    response = [scipy.fft.rfft2(part, size) for part in kernel]
-    out = np.empty((2, ny, nx))
-    for component, (kx, ky) in enumerate(((0, 1), (1, 2))):
-        whole = scipy.fft.irfft2(response[kx] * sources[0] + response[ky] * sources[1], size)
-        out[component] = whole[ny - 1 : 2 * ny - 1, nx - 1 : 2 * nx - 1]
-    return out
+    if not tractions:
+        return []
+    ny, nx = tractions[0].shape[1:]
+    operator = SurfaceOperator(gel, (ny + 2 * margin, nx + 2 * margin), spacing, receiver="average")
+    pad = ((0, 0), (margin, margin), (margin, margin))
+    return [operator.displacement(np.pad(traction, pad)) for traction in tractions]
 
 
-def node_mean(u: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Mean of a smooth field over every node's square, from its values at the centres.
+def lattice_work(traction: NDArray[np.float64], u: NDArray[np.float64], spacing: float) -> float:
+    """Integral of T . u dA (J) for a traction bilinear between nodes and u known at the nodes.
 
-    mean = u + (d^2/24) laplacian(u) + O(d^4), the midpoint rule's next term; an energy sums T times this mean.
+    Every node value of T multiplies the integral of its hat function times u,
+    ``d^2 (u + (d^2/12) laplacian u)`` to fourth order in the spacing d.
     """
     padded = np.pad(u, ((0, 0), (1, 1), (1, 1)), mode="edge")
-    laplacian = (
-        padded[:, 2:, 1:-1]
-        + padded[:, :-2, 1:-1]
-        + padded[:, 1:-1, 2:]
-        + padded[:, 1:-1, :-2]
-        - 4 * padded[:, 1:-1, 1:-1]
-    )
-    out: NDArray[np.float64] = u + laplacian / 24
-    return out
+    ring = padded[:, 2:, 1:-1] + padded[:, :-2, 1:-1] + padded[:, 1:-1, 2:] + padded[:, 1:-1, :-2]
+    return float((traction * (u + (ring - 4 * u) / 12)).sum()) * spacing**2
 
 
 def displacement_at(
@@ -67,6 +56,12 @@ def displacement_at(
     """``(n, 2)`` values of the lattice field ``u`` at ``positions`` (x, y, same unit as ``origin`` and ``spacing``).
 
     ``origin`` is the coordinate of the first node on both axes; bicubic spline.
+
+    Examples
+    --------
+    >>> y, x = np.mgrid[:9, :9].astype(float)
+    >>> displacement_at(np.stack([x, y**2]), 0.0, 1.0, np.array([[3.25, 4.5]])).round(6)
+    array([[ 3.25, 20.25]])
     """
     y = origin + spacing * np.arange(u.shape[1])
     x = origin + spacing * np.arange(u.shape[2])
