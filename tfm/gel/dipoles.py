@@ -190,7 +190,7 @@ def dipole_interaction(gel: Gel, dipole_a: ArrayLike, dipole_b: ArrayLike, x: Ar
     a, b = _dipole("dipole_a", dipole_a), _dipole("dipole_b", dipole_b)
     x_array, y_array, r = positions(x, y)
     scale = 1.0 / (2.0 * np.pi * gel.shear_modulus)
-    f = {**radial_functions(gel, r, 2), **radial_functions(gel, r, 3)}
+    f = radial_functions(gel, r, 4)
     strain_b = scale * _strain(b, x_array, y_array, f)
     strain_a = scale * _strain(a, x_array, y_array, f)
     a_xx, a_xy, a_yy = a

@@ -9,7 +9,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tfm.errors import InputError
-from tfm.gel.lattice import half_space_lattice, node_rule, rectangles, weight_of, weighted_average
+from tfm.gel.lattice import (
+    FAR,
+    filtered_average,
+    half_space_lattice,
+    node_filter,
+    node_rule,
+    rectangles,
+    weight_of,
+    weighted_average,
+)
 from tfm.gel.model import Gel
 from tfm.gel.radial import CUTOFF, radial_functions
 from tfm.gel.tensor import assemble_tensor
@@ -23,8 +32,10 @@ _Kind = Literal["value", "by_nu", "by_thickness"]
 _THIN = 0.02  # thickness over spacing: below, the layer's response is integrated directly instead of as a difference
 _GRADED = 2.0  # below, the difference varies within a node: graded panels
 _NEAR = 4  # offsets integrated with graded panels
-#: Smallest thickness/spacing -> Gauss points per axis; the remaining error is below 1e-10 of the response.
-_POINTS = ((60.0, 2), (12.0, 3), (4.0, 4), (2.0, 6), (0.0, 12))
+#: Smallest thickness/spacing -> order of the filter; the remaining error is below 1e-10 of the half-space's response.
+_FILTERS = ((12.0, 5), (4.0, 8))
+#: The same for Gauss points per axis, for thinner layers.
+_POINTS = ((2.0, 6), (0.0, 12))
 
 
 def checked_lattice(shape: tuple[int, int], spacing: float) -> tuple[int, int, float]:
@@ -91,11 +102,11 @@ def _panels(eta: float, finest: float) -> tuple[Array, Array]:
     return (nodes[keep], all_weights[keep]) if finest < eta / 2 else (nodes, all_weights)
 
 
-def _near_block(gel: Gel, spacing: float, receiver: str, kind: _Kind, uniform: float) -> Array:
+def _near_block(gel: Gel, spacing: float, receiver: str, kind: _Kind) -> Array:
     """``(3, 5, 5)`` averages at offsets 0..4 for layers thinner than two nodes, in units of 1/(2 pi G).
 
     Returns the difference to the half-space for thickness > 0.02 spacing, the layer's response itself below; there the
-    node's own value is ``uniform`` (the k = 0 response) minus what the weight leaves out.
+    node's own value is the k = 0 response (h / G) minus what the weight leaves out.
     """
     eta = float(gel.thickness or 0.0) / spacing
     thin = eta < _THIN
@@ -109,6 +120,7 @@ def _near_block(gel: Gel, spacing: float, receiver: str, kind: _Kind, uniform: f
     odd[0] = 0.0
     out = np.stack([even @ values[0] @ even.T, odd @ values[1] @ odd.T, even @ values[2] @ even.T])
     if thin:
+        uniform = 2.0 * np.pi * {"value": float(gel.thickness or 0.0), "by_nu": 0.0, "by_thickness": 1.0}[kind]
         missing = 4.0 * weights[:, None] * weights * (1.0 - here[0][:, None] * here[0])
         out[0, 0, 0] = uniform - float((missing * values[0]).sum())
         out[2, 0, 0] = uniform - float((missing * values[2]).sum())
@@ -120,24 +132,29 @@ def _quadrant(gel: Gel, ny: int, nx: int, spacing: float, receiver: str, kind: _
     if gel.thickness is None:
         return _half_space(gel, receiver, ny, nx, spacing, kind)
     eta = gel.thickness / spacing
-    reach = 1 + int(np.ceil(min(CUTOFF * eta, float(max(ny, nx))))) + 1  # offsets that the layer reaches at all
-    out = np.zeros((3, ny, nx))
+    reach = 2 + int(np.ceil(min(CUTOFF * eta, float(max(ny, nx)))))  # offsets that the layer reaches at all
+    order = next((order for least, order in _FILTERS if eta >= least), None)
     graded = eta < _GRADED
-    edge = _NEAR + 1 if graded else max(_NEAR + 1, int(np.ceil(1.5 * eta)))
+    edge = _NEAR + 1 if graded or order is None else max(FAR, int(np.ceil(1.5 * eta)))
     near_y, near_x = min(ny, edge), min(nx, edge)
+
+    def average(part: str, rows: slice, columns: slice) -> Array:
+        function = _tensor(gel, spacing, part, kind)
+        if order is not None:
+            return filtered_average(function, rows, columns, node_filter(receiver, order))
+        points = next(points for least, points in _POINTS if eta >= least)
+        return weighted_average(function, rows, columns, node_rule(receiver, points))
+
+    out = np.zeros((3, ny, nx))
     near = out[:, :near_y, :near_x]
-    rule = node_rule(receiver, next(points for least, points in _POINTS if eta >= least))
-    if not graded or eta >= _THIN:
+    if eta >= _THIN:
         near += _half_space(gel, receiver, near_y, near_x, spacing, kind)
     if graded:
-        uniform = {"value": gel.thickness, "by_nu": 0.0, "by_thickness": 1.0}[kind] * 2.0 * np.pi
-        near += _near_block(gel, spacing, receiver, kind, uniform)[:, :near_y, :near_x]
+        near += _near_block(gel, spacing, receiver, kind)[:, :near_y, :near_x]
     else:
-        near += weighted_average(
-            _tensor(gel, spacing, "difference", kind), slice(0, near_y), slice(0, near_x), rule
-        )
+        near += average("difference", slice(0, near_y), slice(0, near_x))
     for rows, columns in rectangles(edge, reach, (ny, nx)):
-        out[:, rows, columns] = weighted_average(_tensor(gel, spacing, "total", kind), rows, columns, rule)
+        out[:, rows, columns] = average("total", rows, columns)
     return out
 
 

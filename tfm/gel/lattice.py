@@ -1,12 +1,13 @@
 """Averages over square nodes: quadrature rules, and the half-space's lattice in closed form.
 
-The source is one square node of edge 1. With ``receiver="average"`` the displacement is averaged over a square of the same
-size: both squares together weigh the separation with a tent (1 - |t|) along each axis. With ``receiver="point"`` the weight
-is the box of the source alone.
+The source is one square node of edge 1. With ``receiver="average"`` the displacement is averaged over a square of the
+same size: both squares together weigh the separation with a tent (1 - |t|) along each axis. With ``receiver="point"`` the
+weight is the box of the source alone.
 
-A half-space needs the averages of d_i d_j r only, because 1/r = d_x d_x r + d_y d_y r. Their antiderivatives are elementary
-(integrate r twice by parts), so near the source the averages are differences of closed forms; far away, where those
-differences would cancel to nothing, Gaussian rules for the same weights take over.
+A half-space needs the averages of d_i d_j r only, because 1/r = d_x d_x r + d_y d_y r. Their antiderivatives are
+elementary (integrate r twice by parts), so near the source the averages are differences of closed forms. Far away those
+differences would cancel to nothing; there the function is smooth on the scale of a node, and its average is a short filter
+of its values at the nodes.
 """
 
 from __future__ import annotations
@@ -16,15 +17,28 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.ndimage import correlate1d
 
 from tfm.errors import InputError
 
-__all__ = ["box", "half_space_lattice", "node_rule", "rectangles", "tent", "weighted_average", "weight_of"]
+__all__ = [
+    "FAR",
+    "box",
+    "filtered_average",
+    "half_space_lattice",
+    "node_filter",
+    "node_rule",
+    "rectangles",
+    "tent",
+    "weight_of",
+    "weighted_average",
+]
 
 Array = NDArray[np.float64]
 
-_CLOSED = 16  # nodes: within, closed forms (relative error 1e-11 at the edge); beyond, quadrature (better than that)
-_SHELLS = ((_CLOSED, 4), (40, 3), (200, 2))  # first offset and points per axis
+_CLOSED = 12  # nodes: within, closed forms (their relative error grows to 1e-11 here); then quadrature
+#: Nodes beyond which a half-space is smooth enough for the filter.
+FAR = 40
 
 
 def tent(t: Array) -> Array:
@@ -76,6 +90,45 @@ def node_rule(receiver: str, count: int) -> tuple[Array, Array]:
     jacobi = np.diag(off_diagonal, 1) + np.diag(off_diagonal, -1)
     points, vectors = np.linalg.eigh(jacobi)
     return points, vectors[0] ** 2
+
+
+@lru_cache(maxsize=16)
+def node_filter(receiver: str, order: int) -> Array:
+    """``(2 order + 1,)`` symmetric filter: values at the nodes -> average with the weight, error of order 2 order + 2.
+
+    With D = d/dt and the central difference delta = 2 sinh(D/2), the box averages by delta / D and the tent by its square;
+    D = 2 asinh(delta/2) turns that into a power series in delta^2.
+    """
+    # asinh(x)/x = sum (-1)^n (2n)! / (4^n n!^2 (2n + 1)) x^(2n); then its reciprocal, with x = delta / 2
+    series = np.empty(order + 1)
+    binomial = 1.0
+    for n in range(order + 1):
+        series[n] = binomial / (2 * n + 1)
+        binomial *= -(2 * n + 1) / (2 * n + 2)
+    reciprocal = np.zeros(order + 1)
+    reciprocal[0] = 1.0
+    for n in range(1, order + 1):
+        reciprocal[n] = -(series[1 : n + 1] * reciprocal[n - 1 :: -1][:n]).sum()
+    if receiver == "average":
+        reciprocal = np.convolve(reciprocal, reciprocal)[: order + 1]
+    taps = np.zeros(2 * order + 1)
+    difference = np.ones(1)
+    for n in range(order + 1):
+        taps[order - n : order + n + 1] += reciprocal[n] * difference / 4.0**n
+        difference = np.convolve(difference, [1.0, -2.0, 1.0])
+    return taps
+
+
+def filtered_average(function: Callable[[Array, Array], Array], rows: slice, columns: slice, taps: Array) -> Array:
+    """Average of ``function(x, y) -> (m, ny, nx)`` by the filter around the integer offsets of two slices.
+
+    For functions that are smooth on the scale of a node; one evaluation per node.
+    """
+    margin = taps.size // 2
+    dy = np.arange(rows.start - margin, rows.stop + margin, dtype=np.float64)[:, None]
+    dx = np.arange(columns.start - margin, columns.stop + margin, dtype=np.float64)[None, :]
+    values = correlate1d(function(dx, dy), taps, axis=2)[:, :, margin:-margin]
+    return np.asarray(correlate1d(values, taps, axis=1)[:, margin:-margin])
 
 
 def rectangles(first: int, last: int, shape: tuple[int, int]) -> Iterator[tuple[slice, slice]]:
@@ -147,9 +200,9 @@ def half_space_lattice(receiver: str, ny: int, nx: int) -> Array:
     out = np.empty((3, ny, nx))
     near_y, near_x = min(ny, _CLOSED), min(nx, _CLOSED)
     out[:, :near_y, :near_x] = _closed(receiver, near_y, near_x)
-    for index, (first, points) in enumerate(_SHELLS):
-        last = _SHELLS[index + 1][0] if index + 1 < len(_SHELLS) else max(ny, nx)
-        for rows, columns in rectangles(first, last, (ny, nx)):
-            out[:, rows, columns] = weighted_average(_far, rows, columns, node_rule(receiver, points))
+    for rows, columns in rectangles(_CLOSED, FAR, (ny, nx)):
+        out[:, rows, columns] = weighted_average(_far, rows, columns, node_rule(receiver, 4))
+    for rows, columns in rectangles(FAR, max(ny, nx), (ny, nx)):
+        out[:, rows, columns] = filtered_average(_far, rows, columns, node_filter(receiver, 5))
     out.flags.writeable = False
     return out
