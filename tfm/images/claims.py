@@ -17,8 +17,9 @@ __all__ = ["MAX_PLANE_PIXELS", "check_ome_claims", "check_pixel_type", "check_pl
 #: Pixels of one plane. The largest cameras have 1e8; a plane in float32 then takes 0.5 GB.
 MAX_PLANE_PIXELS = 2**27
 _GREY = "save the channel with the beads alone, as grey values"
-#: PhotometricInterpretation (TIFF 6.0): RGB, CMYK, YCbCr, CIELab, ICCLab, ITULab.
-_COLOUR = (2, 5, 6, 8, 9, 10)
+#: PhotometricInterpretation (TIFF 6.0).
+_RGB, _PALETTE = 2, 3
+_OTHER_COLOUR = (5, 6, 8, 9, 10)  # CMYK, YCbCr, CIELab, ICCLab, ITULab
 _COUNTS = {
     "Pixels": ("SizeC", "SizeT", "SizeZ"),
     "TiffData": ("PlaneCount", "NumPlanes", "IFD", "FirstT", "FirstC", "FirstZ"),
@@ -96,14 +97,17 @@ def _whole(name: str, key: str, text: str) -> int:
     return int(text)
 
 
-def check_pixel_type(name: str, key: Any, axes: str, *, labels: bool, imagej: bool) -> None:
+def check_pixel_type(name: str, key: Any, axes: str, *, labels: bool, imagej: bool, named: bool) -> None:
     """Grey numbers only: ``colour-image``, ``pixel-type``, or ``missing-codec`` where they cannot be unpacked.
 
-    ImageJ stores an 8-bit image with a look-up table as a palette image; its numbers are the measured ones.
+    ImageJ stores an 8-bit image with a look-up table as a palette image; its numbers are the measured ones. Writers
+    that know no better call a stack of three planes RGB: it passes where the file or the caller (``named``) says what
+    the planes are.
     """
-    if axes.endswith("S") or int(key.photometric) in _COLOUR:
+    called_colour = int(key.photometric) == _RGB and "S" in axes and not named
+    if axes.endswith("S") or called_colour or int(key.photometric) in _OTHER_COLOUR:
         raise InputError("this is a colour image", code="colour-image", file=name, remedy=_GREY)
-    if int(key.photometric) == 3 and not imagej and not labels:
+    if int(key.photometric) == _PALETTE and not imagej and not labels:
         raise InputError("this is an image with a colour palette", code="colour-image", file=name, remedy=_GREY)
     kind = None if key.dtype is None else key.dtype.kind
     if kind not in ("u", "i", "f") and not (labels and kind == "b"):
@@ -142,5 +146,8 @@ def check_segments(name: str, page: Any, size: int) -> None:
         raise MeasurementError("tiles or strips are missing", code="missing-tiles", file=name, remedy=RESAVE)
     if any(offset + count > size for offset, count in zip(offsets, counts, strict=True)):
         raise truncated(name, "tiles or strips lie beyond its end")
-    if int(page.compression) == 1 and sum(counts) < page.nbytes:
-        raise truncated(name, f"its strips hold {sum(counts)} bytes of {page.nbytes}")
+    # Rows of samples that are no whole bytes (12-bit cameras) are padded to a byte.
+    bits = page.keyframe.bitspersample if isinstance(page.keyframe.bitspersample, int) else 0
+    needed = math.prod(page.shape[:-1]) * math.ceil(page.shape[-1] * bits / 8)
+    if int(page.compression) == 1 and sum(counts) < needed:
+        raise truncated(name, f"its strips hold {sum(counts)} bytes of {needed}")

@@ -189,7 +189,7 @@ def open_frames(path: str | os.PathLike[str], *, axes: str | None = None, labels
     MeasurementError
         ``truncated-file``, ``damaged-file``, ``missing-planes``, ``missing-tiles``, ``too-large``, ``zero-size``.
     """
-    source, scale = _open_source(path, labels)
+    source, scale = _open_source(path, labels=labels, named=axes is not None)
     letters, sizes = _name_axes(str(path), source.axes, source.sizes, axes)
     length = dict(zip(letters, sizes, strict=True))
     dtype = source.dtype.newbyteorder("=")
@@ -215,8 +215,8 @@ def open_frames(path: str | os.PathLike[str], *, axes: str | None = None, labels
     )
 
 
-def _open_source(path: str | os.PathLike[str], labels: bool) -> tuple[PlaneSource, meta.FileMetadata]:
-    return read_tiff_header(path, labels=labels)
+def _open_source(path: str | os.PathLike[str], *, labels: bool, named: bool) -> tuple[PlaneSource, meta.FileMetadata]:
+    return read_tiff_header(path, labels=labels, named=named)
 
 
 def _name_axes(path: str, declared: str, sizes: tuple[int, ...], given: str | None) -> tuple[str, tuple[int, ...]]:

@@ -113,7 +113,7 @@ def _check_unpacked_size(path: str, page: Any) -> None:
 
 
 def read_tiff_header(
-    path: str | os.PathLike[str], *, labels: bool = False, max_pixels: int = MAX_PLANE_PIXELS
+    path: str | os.PathLike[str], *, labels: bool = False, named: bool = False, max_pixels: int = MAX_PLANE_PIXELS
 ) -> tuple[TiffPlanes, meta.FileMetadata]:
     """The table of planes and the scale of a TIFF; no pixel is read.
 
@@ -121,6 +121,8 @@ def read_tiff_header(
     ----------
     labels
         Allow black-and-white and palette images.
+    named
+        The caller knows what the planes are, so planes called RGB by a careless writer pass.
     max_pixels
         Largest plane that is read.
 
@@ -140,7 +142,7 @@ def read_tiff_header(
         if root is not None:
             check_ome_claims(name, root, pages=count, samples=int(first.samplesperpixel))
         series = _one_series(name, tif, log)
-        check_pixel_type(name, series.keyframe, str(series.axes), labels=labels, imagej=tif.is_imagej)
+        check_pixel_type(name, series.keyframe, str(series.axes), labels=labels, imagej=tif.is_imagej, named=named)
         check_plane_size(name, series.keyframe, max_pixels)
         return _planes(name, tif, series, max_pixels), _scale(tif, root, series.keyframe)
 
