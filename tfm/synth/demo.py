@@ -6,13 +6,12 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
-import tifffile
 from numpy.typing import NDArray
 
 from tfm.gel import Gel
 from tfm.synth.beads import Camera, make_beads
 from tfm.synth.cells import SyntheticCell, make_cell_traction
-from tfm.synth.demo_files import PIXEL, README, write_outline, write_table, write_tiff
+from tfm.synth.demo_files import PIXEL, README, write_outline, write_planes, write_table, write_tiff
 from tfm.synth.fields import SyntheticField, cell_displacements, make_bead_images, make_field
 from tfm.synth.forward import displacement_at
 from tfm.units import from_si
@@ -129,15 +128,14 @@ def _time_series(study: _Study) -> None:
         frames.append(stressed)
         _truth_rows(study, "time_series", _scaled(base, level), frame=number)
     write_tiff(study.root / "images/time_series_relaxed.tif", relaxed)
-    tifffile.imwrite(
+    write_planes(
         study.root / "images/time_series_stressed.tif",
         np.stack(frames),
         imagej=True,
-        compression="zlib",
         resolution=(1e-6 / PIXEL, 1e-6 / PIXEL),
         metadata={"axes": "TYX", "unit": "um", "finterval": 120.0, "tunit": "s"},
     )
-    tifffile.imwrite(study.root / "outlines/time_series.tif", base.labels.astype(np.uint8), compression="zlib")
+    write_planes(study.root / "outlines/time_series.tif", base.labels.astype(np.uint8))
     study.sheet.append(
         _sheet_row(
             "time_series", "time_series", "outlines/time_series.tif", "6 kPa", "300 Pa", "60 um", "series, 6 kPa"

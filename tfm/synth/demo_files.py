@@ -6,6 +6,7 @@ import csv
 import io
 import json
 import zipfile
+import zlib
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
@@ -17,23 +18,47 @@ from numpy.typing import NDArray
 
 from tfm.synth.fields import SyntheticField
 
-__all__ = ["PIXEL", "README", "write_outline", "write_table", "write_tiff"]
+__all__ = ["PIXEL", "README", "write_outline", "write_planes", "write_table", "write_tiff"]
 
 #: m, pixel size of the demo.
 PIXEL = 0.2e-6
 
 
+def write_planes(path: Path, planes: NDArray[Any], **options: Any) -> None:
+    """A deflate-compressed TIFF, one strip a plane.
+
+    Compressed here and not by the library, which uses whatever codec is installed: the demo is to be the same bytes
+    everywhere, and readable without any extra codec.
+    """
+    ordered = np.ascontiguousarray(planes, dtype=planes.dtype.newbyteorder("<"))
+    stack = ordered.reshape(-1, *ordered.shape[-2:])
+    strips = iter([zlib.compress(plane.tobytes(), 9) for plane in stack])
+    tifffile.imwrite(
+        path,
+        strips,
+        shape=ordered.shape,
+        dtype=ordered.dtype,
+        compression="zlib",
+        rowsperstrip=stack.shape[1],
+        **options,
+    )
+
+
 def write_tiff(path: Path, image: NDArray[np.uint16], *, ome: bool = False) -> None:
-    """Deflate without predictor: readable without any extra codec."""
-    options: dict[str, Any] = {"compression": "zlib", "resolution": (1e-6 / PIXEL, 1e-6 / PIXEL)}
+    """A bead image with its pixel size, as OME-TIFF or ImageJ-TIFF."""
+    options: dict[str, Any] = {"resolution": (1e-6 / PIXEL, 1e-6 / PIXEL)}
     if ome:
-        size = {"PhysicalSizeX": PIXEL * 1e6, "PhysicalSizeXUnit": "um", "PhysicalSizeY": PIXEL * 1e6,
-                "PhysicalSizeYUnit": "um"}  # fmt: skip
-        # A fixed identifier: the library would draw a new one each time, and the demo is to be the same bytes.
+        size = {
+            "PhysicalSizeX": PIXEL * 1e6,
+            "PhysicalSizeXUnit": "um",
+            "PhysicalSizeY": PIXEL * 1e6,
+            "PhysicalSizeYUnit": "um",
+        }
+        # A fixed identifier: the library would draw a new one each time.
         identifier = f"00000000-0000-4000-8000-{sum(path.name.encode()):012d}"
-        tifffile.imwrite(path, image, ome=True, metadata={"axes": "YX", "UUID": identifier, **size}, **options)
+        write_planes(path, image, ome=True, metadata={"axes": "YX", "UUID": identifier, **size}, **options)
     else:
-        tifffile.imwrite(path, image, imagej=True, metadata={"unit": "um"}, **options)
+        write_planes(path, image, imagej=True, metadata={"unit": "um"}, **options)
 
 
 def write_outline(root: Path, name: str, made: SyntheticField, kind: str) -> str:
@@ -41,7 +66,7 @@ def write_outline(root: Path, name: str, made: SyntheticField, kind: str) -> str
     shown = [c for n, c in enumerate(made.cells, start=1) if (made.labels == n).any()]
     if kind == "label":
         path = f"outlines/{name}.tif"
-        tifffile.imwrite(root / path, made.labels.astype(np.uint8), compression="zlib")
+        write_planes(root / path, made.labels.astype(np.uint8))
     elif kind == "geojson":
         path = f"outlines/{name}.geojson"
         features = [
