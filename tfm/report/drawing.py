@@ -12,8 +12,9 @@ from typing import Any
 from matplotlib.figure import Figure
 
 from tfm.batch.atomic import file_sha256
+from tfm.report.checks import beads_figure, residual_figure
 from tfm.report.fielddata import FieldArrays, read_arrays
-from tfm.report.figures import beads_figure, maps_figure, residual_figure, rows_of_frame
+from tfm.report.figures import maps_figure, rows_of_frame
 from tfm.report.files import svg_text, thumbnail, write_bytes
 from tfm.report.numbers import numbers_figure
 from tfm.report.results import FieldResult, number

@@ -1,12 +1,13 @@
-"""Arrays of one field and frame, out of its netCDF file. What the file does not hold is ``None``: pictures draw what is there."""
+"""Arrays of one field and frame, out of its netCDF file. What the file does not hold is ``None``."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
+import h5netcdf
 import numpy as np
-import xarray as xr
 from numpy.typing import NDArray
 
 __all__ = ["FieldArrays", "read_arrays"]
@@ -28,10 +29,9 @@ class FieldArrays:
         ``(3, ny, nx)`` 1/m^2.
     xt, yt, traction, predicted, labels
         Lattice positions m, traction ``(2, nyt, nxt)`` Pa, displacement that it predicts (m), cell labels.
-    relaxed, stressed, residual
-        Bead images and what is left of their difference, ``[row, column]``.
-    pixel
-        m, edge of a pixel of those images.
+    xi, yi, relaxed, stressed, residual
+        Positions m of the pictures' pixels, pictures of the bead images, and what is left of their difference in
+        standard deviations of the relaxed one, ``[row, column]``.
     """
 
     frame: int
@@ -45,58 +45,66 @@ class FieldArrays:
     traction: Array | None = None
     predicted: Array | None = None
     labels: NDArray[np.int32] | None = None
+    xi: Array | None = None
+    yi: Array | None = None
     relaxed: Array | None = None
     stressed: Array | None = None
     residual: Array | None = None
-    pixel: float | None = None
+
+    @property
+    def camera_pixel(self) -> float | None:
+        """m, edge of a pixel of the recorded image: pictures may be means over blocks of such pixels."""
+        if self.xi is None or len(self.xi) < 2:
+            return None
+        # The first block of n pixels is centred at (n - 1) / 2 pixels, and blocks follow every n pixels.
+        return float(self.xi[1] - self.xi[0] - 2 * self.xi[0])
 
 
-def _take(data: xr.Dataset, name: str, frame: int, dimensions: int) -> Array | None:
-    if name not in data:
+def _take(file: Any, name: str, frame: int, dimensions: int) -> Array | None:
+    """One frame of a variable with its scale factor; None when absent or NaN throughout."""
+    if name not in file.variables:
         return None
-    variable = data[name]
-    extra = [d for d in variable.dims[: max(variable.ndim - dimensions, 0)]]
-    for dim in extra:
-        variable = variable.isel({dim: min(frame, variable.sizes[dim] - 1)})
-    values = np.asarray(variable.values, dtype=float)
-    return values if values.ndim == dimensions and values.size else None
+    variable = file.variables[name]
+    if variable.ndim > dimensions:
+        if variable.shape[0] == 0:
+            return None
+        raw = variable[min(frame, variable.shape[0] - 1)]
+    else:
+        raw = variable[...]
+    values = np.asarray(raw, dtype=float) * float(variable.attrs.get("scale_factor", 1.0))
+    return values if values.ndim == dimensions and values.size and np.isfinite(values).any() else None
 
 
-def _axis(data: xr.Dataset, like: str, position: int) -> Array | None:
-    """Positions along one of the last dimensions of a variable, in metres."""
-    if like not in data:
+def _axis(file: Any, like: str, position: int) -> Array | None:
+    """Positions (m) along one of the last dimensions of a variable."""
+    if like not in file.variables:
         return None
-    dim = str(data[like].dims[position])
-    if dim not in data.coords:
+    name = file.variables[like].dimensions[position]
+    if name not in file.variables or file.variables[name].shape[0] < 2:
         return None
-    coordinate = data[dim]
-    factor = 1e-6 if coordinate.attrs.get("units") in ("um", "micrometer") else 1.0
-    return np.asarray(coordinate.values, dtype=float) * factor
+    factor = 1e-6 if file.variables[name].attrs.get("units") in ("um", "micrometer") else 1.0
+    return np.asarray(file.variables[name][...], dtype=float) * factor
 
 
 def read_arrays(path: Path, *, frame: int = 0) -> FieldArrays:
-    """The arrays of one frame."""
-    with xr.open_dataset(path, engine="h5netcdf") as data:
-        frames = max([data.sizes[d] for d in ("frame", "time") if d in data.sizes], default=1)
-        column = _axis(data, "relaxed_image", -1)
-        pixel = (
-            float(column[1] - column[0]) if column is not None and len(column) > 1 else data.attrs.get("image_pixel_m")
-        )
-        labels = _take(data, "labels", frame, 2)
+    """The arrays of one frame of ``fields/<field>.nc``."""
+    with h5netcdf.File(path, "r") as file:
+        labels = _take(file, "labels", frame, 2)
         return FieldArrays(
             frame=frame,
-            frames=frames,
-            x=_axis(data, "displacement", -1),
-            y=_axis(data, "displacement", -2),
-            u=_take(data, "displacement", frame, 3),
-            precision=_take(data, "displacement_precision", frame, 3),
-            xt=_axis(data, "traction", -1),
-            yt=_axis(data, "traction", -2),
-            traction=_take(data, "traction", frame, 3),
-            predicted=_take(data, "traction_displacement", frame, 3),
+            frames=max(int(file.dimensions["frame"].size), 1) if "frame" in file.dimensions else 1,
+            x=_axis(file, "displacement", -1),
+            y=_axis(file, "displacement", -2),
+            u=_take(file, "displacement", frame, 3),
+            precision=_take(file, "displacement_precision", frame, 3),
+            xt=_axis(file, "traction", -1),
+            yt=_axis(file, "traction", -2),
+            traction=_take(file, "traction", frame, 3),
+            predicted=_take(file, "traction_displacement", frame, 3),
             labels=None if labels is None else labels.astype(np.int32),
-            relaxed=_take(data, "relaxed_image", frame, 2),
-            stressed=_take(data, "stressed_image", frame, 2),
-            residual=_take(data, "residual_image", frame, 2),
-            pixel=None if pixel is None else float(pixel),
+            xi=_axis(file, "relaxed_image", -1),
+            yi=_axis(file, "relaxed_image", -2),
+            relaxed=_take(file, "relaxed_image", frame, 2),
+            stressed=_take(file, "stressed_image", frame, 2),
+            residual=_take(file, "residual_image", frame, 2),
         )

@@ -70,26 +70,23 @@ def _sample(
 
 def thumbnail(a: FieldArrays, *, size: int = 256) -> bytes | None:
     """Small lossy WebP for the index: traction over dim beads with the outlines in white."""
-    lattices = [
-        (x, y) for x, y in ((a.xt, a.yt), (a.x, a.y)) if x is not None and y is not None and min(len(x), len(y)) > 1
-    ]
-    if a.relaxed is not None and a.pixel:
-        lattices.insert(0, tuple(np.arange(n) * a.pixel for n in a.relaxed.shape[::-1]))  # type: ignore[arg-type]
-    if not lattices:
+    pictures, lattice, vectors = (a.xi, a.yi), (a.xt, a.yt), (a.x, a.y)
+    found = [(x, y) for x, y in (pictures, lattice, vectors) if x is not None and y is not None]
+    if not found:
         return None
-    (x, y), lattice = lattices[0], lattices[-1] if a.traction is None else lattices[-2 if a.u is not None else -1]
+    x, y = found[0]
     scale = size / max(x[-1] - x[0], y[-1] - y[0])
     at = tuple(np.linspace(p[0], p[-1], max(round((p[-1] - p[0]) * scale), 1)) for p in (x, y))
     canvas: NDArray[np.float64] = np.full((len(at[1]), len(at[0]), 3), 0.08)
-    if a.relaxed is not None and a.pixel:
+    if a.relaxed is not None:
         grey = _sample(a.relaxed, x, y, (at[0], at[1]), 1)
         low, high = np.percentile(grey, (2, 99.5))
         canvas[:] = (np.clip((grey - low) / max(high - low, 1e-12), 0, 1) * 0.45)[..., None]
-    source = a.traction if a.traction is not None else a.u
-    if source is not None:
+    source, (sx, sy) = (a.traction, lattice) if a.traction is not None else (a.u, vectors)
+    if source is not None and sx is not None and sy is not None:
         values = np.nan_to_num(np.hypot(*source))
         top = float(np.percentile(values[values > 0], 99.5)) if (values > 0).any() else 1.0
-        shade = np.clip(_sample(values, *lattice, (at[0], at[1]), 1) / top, 0, 1)
+        shade = np.clip(_sample(values, sx, sy, (at[0], at[1]), 1) / top, 0, 1)
         weight = np.clip(shade * 1.6, 0, 0.9)[..., None]
         canvas = canvas * (1 - weight) + colormaps[TRACTION_MAP](shade)[..., :3] * weight
     if a.labels is not None and a.xt is not None and a.yt is not None:

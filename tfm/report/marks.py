@@ -6,11 +6,12 @@ from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
+from contourpy import contour_generator
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.patheffects import withStroke
 from mpl_toolkits.axes_grid1.anchored_artists import AnchoredSizeBar
-from numpy.typing import ArrayLike
+from numpy.typing import ArrayLike, NDArray
 
 from tfm.report.style import PAPER
 
@@ -124,22 +125,23 @@ def draw_axes_sign(ax: Axes, *, colour: str = "#ffffff") -> list[Artist]:
 
 def draw_outlines(ax: Axes, x: ArrayLike, y: ArrayLike, labels: ArrayLike, *, names: bool = True) -> list[Artist]:
     """Outline of every cell as a white line on a black one, which reads on any map and in grey, with its number."""
-    xs, ys, number = np.asarray(x) * UM, np.asarray(y) * UM, np.asarray(labels)
+    xs, ys, number = np.asarray(x, float) * UM, np.asarray(y, float) * UM, np.asarray(labels)
+    gx = np.concatenate(([2 * xs[0] - xs[1]], xs, [2 * xs[-1] - xs[-2]]))
+    gy = np.concatenate(([2 * ys[0] - ys[1]], ys, [2 * ys[-1] - ys[-2]]))
     drawn: list[Artist] = []
     for cell in np.unique(number[number > 0]):
-        inside = np.pad((number == cell).astype(float), 1)
-        gx = np.concatenate(([2 * xs[0] - xs[1]], xs, [2 * xs[-1] - xs[-2]]))
-        gy = np.concatenate(([2 * ys[0] - ys[1]], ys, [2 * ys[-1] - ys[-2]]))
-        for colour, width in (("#000000", 2.4), ("#ffffff", 1.0)):
-            drawn.append(ax.contour(gx, gy, inside, levels=[0.5], colors=[colour], linewidths=[width], zorder=4))
+        here = number == cell
+        for line in contour_generator(gx, gy, np.pad(here.astype(float), 1)).lines(0.5):
+            for colour, width in (("#000000", 2.4), ("#ffffff", 1.0)):
+                drawn += ax.plot(line[:, 0], line[:, 1], color=colour, lw=width, zorder=4)
         if names:
-            rows, columns = np.nonzero(number == cell)
-            place = (xs[columns].max(), ys[rows[np.argmax(columns)]])
+            rows, columns = np.nonzero(here)
+            right = int(np.argmax(columns))
             drawn.append(
                 ax.annotate(
                     str(cell),
-                    place,
-                    (4, 0),
+                    (float(xs[columns[right]]), float(ys[rows[right]])),
+                    (5, 0),
                     textcoords="offset points",
                     color="#ffffff",
                     fontsize=9,
@@ -147,7 +149,6 @@ def draw_outlines(ax: Axes, x: ArrayLike, y: ArrayLike, labels: ArrayLike, *, na
                     va="center",
                     path_effects=halo(),
                     zorder=7,
-                    annotation_clip=True,
                 )
             )
     return drawn

@@ -56,7 +56,9 @@ __all__ = [
 Array = NDArray[np.float64]
 
 
-def draw_beads(ax: Axes, image: ArrayLike, *, pixel: float, levels: int = 24, gain: float = 0.62) -> AxesImage:
+def draw_beads(
+    ax: Axes, x: ArrayLike, y: ArrayLike, image: ArrayLike, *, levels: int = 24, gain: float = 0.62
+) -> AxesImage:
     """Beads in dim grey as a background, stretched between the 2nd and 99.7th percentile.
 
     ``levels`` grey values are enough under arrows and keep the vector file small; ``gain`` < 1 leaves room for arrows.
@@ -65,24 +67,22 @@ def draw_beads(ax: Axes, image: ArrayLike, *, pixel: float, levels: int = 24, ga
     low, high = np.percentile(grey[::4, ::4], (2, 99.7))
     shade = np.clip((grey - low) / max(high - low, 1e-12), 0, 1)
     shade = np.round(shade * (levels - 1)) / (levels - 1) * gain
-    ny, nx = grey.shape
-    extent = extent_of(np.array([0.0, pixel * (nx - 1)]) if nx < 2 else np.arange(nx) * pixel, np.arange(ny) * pixel)
+    extent = extent_of(np.asarray(x, float), np.asarray(y, float))
     return ax.imshow(shade, cmap="gray", vmin=0, vmax=1, extent=extent, zorder=0)
 
 
-def draw_overlay(
-    ax: Axes, relaxed: ArrayLike, stressed: ArrayLike, *, x: float = 0.0, y: float = 0.0, pixel: float
-) -> AxesImage:
-    """Relaxed beads in orange, stressed in blue: where both agree the sum is white. (``x``, ``y``) m: first pixel's centre."""
+def draw_overlay(ax: Axes, x: ArrayLike, y: ArrayLike, relaxed: ArrayLike, stressed: ArrayLike) -> AxesImage:
+    """Relaxed beads in orange, stressed in blue: where both agree the sum is white.
+
+    ``x`` ``(nx,)`` and ``y`` ``(ny,)`` m are the centres of the pixels of both ``(ny, nx)`` images.
+    """
     sums = np.zeros((*np.shape(relaxed), 3))
     for image, colour in ((relaxed, (1.0, 0.58, 0.08)), (stressed, (0.0, 0.42, 0.92))):
         grey = np.asarray(image, dtype=float)
         low, high = np.percentile(grey, (5, 99.6))
         sums += np.clip((grey - low) / max(high - low, 1e-12), 0, 1)[..., None] * np.array(colour)
-    ny, nx = sums.shape[:2]
-    return ax.imshow(
-        np.round(sums.clip(0, 1) * 31) / 31, extent=extent_of(x + np.arange(nx) * pixel, y + np.arange(ny) * pixel)
-    )
+    extent = extent_of(np.asarray(x, float), np.asarray(y, float))
+    return ax.imshow(np.round(sums.clip(0, 1) * 15) / 15, extent=extent)
 
 
 def _arrow_scale(x: Array, size: Array, *, across: int) -> tuple[int, float]:

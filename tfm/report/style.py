@@ -12,10 +12,11 @@ import matplotlib as mpl
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
-__all__ = ["INK", "LINE", "MARKS", "PAPER", "QUIET", "SIGN_MAP", "SIZE_MAP", "TRACTION_MAP", "drawing", "new_figure"]
+__all__ = ["GROUND", "INK", "LINE", "MARKS", "PAPER", "QUIET", "SIGN_MAP", "SIZE_MAP", "TRACTION_MAP", "drawing", "new_figure"]
 
 PAPER: Final = "#fcfbf7"
 INK: Final = "#17202b"
+GROUND: Final = "#eeece4"
 QUIET: Final = "#5a6470"
 LINE: Final = "#0b5a6b"
 
@@ -31,7 +32,7 @@ MARKS: Final[dict[str, tuple[str, str]]] = {
     "ok": ("●", "#0b5a6b"),
 }
 
-_SETTINGS: Final[dict[str, Any]] = {
+_SETTINGS: Final[Any] = {
     "svg.fonttype": "none",  # text stays text in the vector files
     "svg.hashsalt": "tfm",  # the same picture is the same bytes
     "font.family": "sans-serif",
