@@ -1,7 +1,8 @@
 """Point force dipoles on the surface: what they displace and strain, and how two of them interact.
 
 A dipole is P_ij = integral of (x_i - c_i) T_j dA, symmetric, given as (P_xx, P_xy, P_yy) in N m; a contracting cell has
-negative principal values. With G_ij = a delta_ij - d_i d_j b (:mod:`tfm.gel.radial`) and r from the dipole to the point::
+negative principal values. With G_ij = a delta_ij - d_i d_j b (:mod:`tfm.gel.radial`) and r from the dipole to the
+point::
 
     u_j    = -P_kl d_k G_jl
     e_mj   = sym(-P_kl d_m d_k G_jl)
@@ -20,7 +21,13 @@ from tfm.gel.model import Gel
 from tfm.gel.radial import RadialFunctions, radial_functions
 from tfm.gel.tensor import positions
 
-__all__ = ["DipoleInteraction", "dipole_displacement", "dipole_interaction", "dipole_interaction_derivatives", "dipole_strain"]
+__all__ = [
+    "DipoleInteraction",
+    "dipole_displacement",
+    "dipole_interaction",
+    "dipole_interaction_derivatives",
+    "dipole_strain",
+]
 
 Array = NDArray[np.float64]
 
@@ -29,10 +36,14 @@ def _dipole(name: str, dipole: ArrayLike) -> tuple[Array, Array, Array]:
     array = np.asarray(dipole, dtype=np.float64)
     if array.ndim == 0 or array.shape[-1] != 3:
         raise InputError(
-            f"{name} has shape {array.shape}", code="bad-dipole", remedy="give (P_xx, P_xy, P_yy) in N m along the last axis"
+            f"{name} has shape {array.shape}",
+            code="bad-dipole",
+            remedy="give (P_xx, P_xy, P_yy) in N m along the last axis",
         )
     if not np.all(np.isfinite(array)):
-        raise InputError(f"{name} holds values that are not finite", code="bad-dipole", remedy="leave unmeasured cells out")
+        raise InputError(
+            f"{name} holds values that are not finite", code="bad-dipole", remedy="leave unmeasured cells out"
+        )
     return array[..., 0], array[..., 1], array[..., 2]
 
 
@@ -131,15 +142,16 @@ class DipoleInteraction:
     Attributes
     ----------
     energy
-        ``(...)`` J: W = integral of T_a . u_b dA in the limit of small cells. Below 0: together they store less than apart.
+        ``(...)`` J: W = integral of T_a . u_b dA in the limit of small cells. Below 0: together they store less than
+        apart.
     force_on_b
         ``(..., 2)`` N: -dW/d(position of b); the force on a is the opposite.
     torque_on_b, torque_on_a
-        ``(...)`` N m: -dW/d(angle of that cell), angles from +x towards +y; the torque of the pair as a whole is balanced:
-        torque_on_a + torque_on_b + (x F_y - y F_x) = 0.
+        ``(...)`` N m: -dW/d(angle of that cell), angles from +x towards +y; the torque of the pair as a whole is
+        balanced: torque_on_a + torque_on_b + (x F_y - y F_x) = 0.
     energy_by_dipole_a, energy_by_dipole_b
-        ``(..., 3)`` J/(N m), dimensionless: dW/d(P_xx, P_xy, P_yy) of each cell, with P_xy = P_yx one variable. W is bilinear, so these
-        carry each cell's covariance to the energy: var = g_a C_a g_a + g_b C_b g_b.
+        ``(..., 3)`` J/(N m), dimensionless: dW/d(P_xx, P_xy, P_yy) of each cell, with P_xy = P_yx one variable. W is
+        bilinear, so these carry each cell's covariance to the energy: var = g_a C_a g_a + g_b C_b g_b.
     """
 
     energy: Array
@@ -150,7 +162,9 @@ class DipoleInteraction:
     energy_by_dipole_b: Array
 
 
-def dipole_interaction(gel: Gel, dipole_a: ArrayLike, dipole_b: ArrayLike, x: ArrayLike, y: ArrayLike) -> DipoleInteraction:
+def dipole_interaction(
+    gel: Gel, dipole_a: ArrayLike, dipole_b: ArrayLike, x: ArrayLike, y: ArrayLike
+) -> DipoleInteraction:
     """Energy, force and torque between point dipoles a and b.
 
     Parameters
@@ -173,9 +187,10 @@ def dipole_interaction(gel: Gel, dipole_a: ArrayLike, dipole_b: ArrayLike, x: Ar
 
     Notes
     -----
-    W = -P^a_ij P^b_kl d_i d_k G_jl(r), even in r; forces and torques are -dW/d(position, angle): what acts on b if cells
-    move so as to store less. For dead loads (passive defects that keep their force while they move) signs are opposite.
-    Valid where the distance is large against the cells. A few microseconds a pair on a layer, less on a half-space.
+    W = -P^a_ij P^b_kl d_i d_k G_jl(r), even in r; forces and torques are -dW/d(position, angle): what acts on b if
+    cells move so as to store less. For dead loads (passive defects that keep their force while they move) signs are
+    opposite. Valid where the distance is large against the cells. A few microseconds a pair on a layer, less on a
+    half-space.
 
     Examples
     --------
@@ -214,7 +229,8 @@ def dipole_interaction(gel: Gel, dipole_a: ArrayLike, dipole_b: ArrayLike, x: Ar
 def _energy_gradient(
     a: tuple[Array, Array, Array], b: tuple[Array, Array, Array], x: Array, y: Array, f: RadialFunctions
 ) -> Array:
-    """dW/dr times 2 pi G, from W = -tr(ab) a_1 - ar.br a_2 + [tr a tr b + 2 tr(ab)] b_2 + [...] b_3 + (rar)(rbr) b_4."""
+    """dW/dr times 2 pi G, from W = -tr(ab) a_1 - ar.br a_2 + [tr a tr b + 2 tr(ab)] b_2 + [...] b_3 + (rar)(rbr)
+    b_4."""
     a_x, a_y = a[0] * x + a[1] * y, a[1] * x + a[2] * y
     b_x, b_y = b[0] * x + b[1] * y, b[1] * x + b[2] * y
     raa, rbb = x * a_x + y * a_y, x * b_x + y * b_y

@@ -1,4 +1,4 @@
-"""Discrete kernels: the displacement of one square node per pascal on another."""
+"""Discrete kernels: what one square node of traction displaces and strains on another."""
 
 from __future__ import annotations
 
@@ -8,165 +8,111 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from tfm.errors import InputError
-from tfm.gel.lattice import (
-    FAR,
-    filtered_average,
-    half_space_lattice,
-    node_filter,
-    node_rule,
-    rectangles,
-    weight_of,
-    weighted_average,
-)
+from tfm.gel.assembly import Quantity, checked_lattice, whole_lattice
+from tfm.gel.lattice import half_space_gradient_lattice, half_space_lattice, weight_of
 from tfm.gel.model import Gel
-from tfm.gel.radial import CUTOFF, radial_functions
-from tfm.gel.tensor import assemble_tensor
+from tfm.gel.radial import RadialFunctions, radial_functions
+from tfm.gel.tensor import assemble_gradient, assemble_tensor
 
-__all__ = ["Receiver", "checked_lattice", "node_kernel", "node_kernel_derivatives"]
+__all__ = ["Receiver", "node_kernel", "node_kernel_derivatives", "node_strain_kernel"]
 
 Array = NDArray[np.float64]
 Receiver = Literal["average", "point"]
-_Kind = Literal["value", "by_nu", "by_thickness"]
+_Function = Callable[[Array, Array], Array]
 
-_THIN = 0.02  # thickness over spacing: below, the layer's response is integrated directly instead of as a difference
-_GRADED = 2.0  # below, the difference varies within a node: graded panels
-_NEAR = 4  # offsets integrated with graded panels
-#: Smallest thickness/spacing -> order of the filter; the remaining error is below 1e-10 of the half-space's response.
-_FILTERS = ((12.0, 5), (4.0, 8))
-#: The same for Gauss points per axis, for thinner layers.
-_POINTS = ((2.0, 6), (0.0, 12))
+_TENSOR_PARITY = ((False, False), (True, True), (False, False))
 
 
-def checked_lattice(shape: tuple[int, int], spacing: float) -> tuple[int, int, float]:
-    """``ny, nx, spacing`` of a lattice.
-
-    Raises
-    ------
-    InputError
-        For a shape that is not two positive integers or a spacing that is not a positive length.
-    """
-    if len(shape) != 2 or any(int(n) != n or n < 1 for n in shape):
-        raise InputError(f"shape is {shape}", code="bad-lattice", remedy="give (ny, nx), both 1 or more")
-    if not (np.isfinite(spacing) and spacing > 0.0):
-        raise InputError(f"spacing is {spacing}", code="bad-lattice", remedy="give the edge of a node in m, for instance 1e-6")
-    return int(shape[0]), int(shape[1]), float(spacing)
+def _half_space_value(gel: Gel, receiver: str, ny: int, nx: int, spacing: float) -> Array:
+    second = half_space_lattice(receiver, ny, nx)
+    out = -gel.poisson * second
+    whole = second[0] + second[2]
+    out[0] += whole
+    out[2] += whole
+    return np.asarray(out * spacing)
 
 
-def _tensor(gel: Gel, spacing: float, part: str, kind: _Kind) -> Callable[[Array, Array], Array]:
-    """``function(x, y)`` in nodes -> (xx, xy, yy) times spacing^2, in units of 1/(2 pi G)."""
+def _half_space_by_nu(gel: Gel, receiver: str, ny: int, nx: int, spacing: float) -> Array:
+    return np.asarray(-spacing * half_space_lattice(receiver, ny, nx))
+
+
+def _half_space_by_thickness(gel: Gel, receiver: str, ny: int, nx: int, spacing: float) -> Array:
+    return np.zeros((3, ny, nx))
+
+
+def _response(by_nu: bool) -> Callable[[Gel, float, str], _Function]:
+    def at(gel: Gel, spacing: float, part: str) -> _Function:
+        def value(x: Array, y: Array) -> Array:
+            x, y = x * spacing, y * spacing
+            functions = radial_functions(gel, np.hypot(x, y), 0, part=part, by_nu=by_nu)
+            return assemble_tensor(x, y, functions) * spacing**2
+
+        return value
+
+    return at
+
+
+def _response_by_thickness(gel: Gel, spacing: float, part: str) -> _Function:
+    """-(G + r . grad G) / h, because G = Phi(r/h) / h."""
+    thickness = float(gel.thickness or np.inf)
 
     def value(x: Array, y: Array) -> Array:
         x, y = x * spacing, y * spacing
         r = np.hypot(x, y)
-        if kind != "by_thickness" or gel.thickness is None:
-            return assemble_tensor(x, y, radial_functions(gel, r, 0, part=part, by_nu=kind == "by_nu")) * spacing**2
         zero, one = (radial_functions(gel, r, order, part=part) for order in (0, 1))
         square = r * r
-        diagonal = zero["a0"] - zero["b1"] + square * (one["a1"] - one["b2"])
-        dyad = zero["b2"] + 2.0 * one["b2"] + square * one["b3"]
-        out = np.stack([diagonal - x * x * dyad, -x * y * dyad, diagonal - y * y * dyad])
-        return out * (-(spacing**2) / gel.thickness)
+        scaled: RadialFunctions = {
+            "a0": zero["a0"] + square * one["a1"],
+            "b1": zero["b1"] + square * one["b2"],
+            "b2": zero["b2"] + 2.0 * one["b2"] + square * one["b3"],
+        }
+        return assemble_tensor(x, y, scaled) * (-(spacing**2) / thickness)
 
     return value
 
 
-def _half_space(gel: Gel, receiver: str, ny: int, nx: int, spacing: float, kind: _Kind) -> Array:
-    """Quadrant of the half-space part, in units of 1/(2 pi G)."""
-    if kind == "by_thickness":
-        return np.zeros((3, ny, nx))
-    second = half_space_lattice(receiver, ny, nx)
-    out = -(1.0 if kind == "by_nu" else gel.poisson) * second
-    if kind == "value":
-        whole = second[0] + second[2]
-        out[0] += whole
-        out[2] += whole
-    return np.asarray(out * spacing)
+def _strain_of(gradient: Array) -> Array:
+    """(e_xx|x, e_xx|y, e_xy|x, e_xy|y, e_yy|x, e_yy|y) of d_k (G_xx, G_xy, G_yy); |x = by traction along x."""
+    (xx_x, xy_x, yy_x), (xx_y, xy_y, yy_y) = gradient  # last letter: derivative
+    return np.stack([xx_x, xy_x, 0.5 * (xx_y + xy_x), 0.5 * (xy_y + yy_x), xy_y, yy_y])
 
 
-def _panels(eta: float, finest: float) -> tuple[Array, Array]:
-    """Gauss-Legendre nodes and weights on [0, 5.5], graded towards 0 down to ``finest``, split at half-integers."""
-    edges = [0.0]
-    size = min(finest, 0.5)
-    while size < 0.5:
-        edges.append(size)
-        size *= 2.0
-    edges.extend(np.arange(0.5, _NEAR + 2.0, 0.5))
-    bounds = np.array(edges)
-    count = 14
-    points, weights = np.polynomial.legendre.leggauss(count)
-    half = 0.5 * np.diff(bounds)[:, None]
-    nodes = (bounds[:-1, None] + half * (1.0 + points)).ravel()
-    all_weights = (half * weights).ravel()
-    keep = nodes < 1.5 * CUTOFF * max(eta, _THIN / 2)  # nothing is left of a layer's response further out
-    return (nodes[keep], all_weights[keep]) if finest < eta / 2 else (nodes, all_weights)
+def _half_space_strain(gel: Gel, receiver: str, ny: int, nx: int, spacing: float) -> Array:
+    xxx, xxy, xyy, yyy = half_space_gradient_lattice(ny, nx)
+    along_x, along_y = xxx + xyy, xxy + yyy  # gradient of 1/r
+    nu = gel.poisson
+    return _strain_of(
+        np.stack(
+            [
+                np.stack([along_x - nu * xxx, -nu * xxy, along_x - nu * xyy]),
+                np.stack([along_y - nu * xxy, -nu * xyy, along_y - nu * yyy]),
+            ]
+        )
+    )
 
 
-def _near_block(gel: Gel, spacing: float, receiver: str, kind: _Kind) -> Array:
-    """``(3, 5, 5)`` averages at offsets 0..4 for layers thinner than two nodes, in units of 1/(2 pi G).
+def _response_strain(gel: Gel, spacing: float, part: str) -> _Function:
+    def value(x: Array, y: Array) -> Array:
+        x, y = np.broadcast_arrays(x * spacing, y * spacing)
+        return _strain_of(assemble_gradient(x, y, radial_functions(gel, np.hypot(x, y), 1, part=part))) * spacing**2
 
-    Returns the difference to the half-space for thickness > 0.02 spacing, the layer's response itself below; there the
-    node's own value is the k = 0 response (h / G) minus what the weight leaves out.
-    """
-    eta = float(gel.thickness or 0.0) / spacing
-    thin = eta < _THIN
-    nodes, weights = _panels(eta, eta * 2.0**-24 if thin else eta)
-    values = _tensor(gel, spacing, "total" if thin else "difference", kind)(nodes[None, :], nodes[:, None])
-    weight = weight_of(receiver)
-    offsets = np.arange(_NEAR + 1.0)[:, None]
-    here, mirrored = weight(nodes - offsets), weight(nodes + offsets)
-    even, odd = (here + mirrored) * weights, (here - mirrored) * weights
-    even[0] = 2.0 * here[0] * weights
-    odd[0] = 0.0
-    out = np.stack([even @ values[0] @ even.T, odd @ values[1] @ odd.T, even @ values[2] @ even.T])
-    if thin:
-        uniform = 2.0 * np.pi * {"value": float(gel.thickness or 0.0), "by_nu": 0.0, "by_thickness": 1.0}[kind]
-        missing = 4.0 * weights[:, None] * weights * (1.0 - here[0][:, None] * here[0])
-        out[0, 0, 0] = uniform - float((missing * values[0]).sum())
-        out[2, 0, 0] = uniform - float((missing * values[2]).sum())
-    return out
+    return value
 
 
-def _quadrant(gel: Gel, ny: int, nx: int, spacing: float, receiver: str, kind: _Kind) -> Array:
-    """``(3, ny, nx)`` at offsets dy, dx >= 0, in units of 1/(2 pi G)."""
-    if gel.thickness is None:
-        return _half_space(gel, receiver, ny, nx, spacing, kind)
-    eta = gel.thickness / spacing
-    reach = 2 + int(np.ceil(min(CUTOFF * eta, float(max(ny, nx)))))  # offsets that the layer reaches at all
-    order = next((order for least, order in _FILTERS if eta >= least), None)
-    graded = eta < _GRADED
-    edge = _NEAR + 1 if graded or order is None else max(FAR, int(np.ceil(1.5 * eta)))
-    near_y, near_x = min(ny, edge), min(nx, edge)
-
-    def average(part: str, rows: slice, columns: slice) -> Array:
-        function = _tensor(gel, spacing, part, kind)
-        if order is not None:
-            return filtered_average(function, rows, columns, node_filter(receiver, order))
-        points = next(points for least, points in _POINTS if eta >= least)
-        return weighted_average(function, rows, columns, node_rule(receiver, points))
-
-    out = np.zeros((3, ny, nx))
-    near = out[:, :near_y, :near_x]
-    if eta >= _THIN:
-        near += _half_space(gel, receiver, near_y, near_x, spacing, kind)
-    if graded:
-        near += _near_block(gel, spacing, receiver, kind)[:, :near_y, :near_x]
-    else:
-        near += average("difference", slice(0, near_y), slice(0, near_x))
-    for rows, columns in rectangles(edge, reach, (ny, nx)):
-        out[:, rows, columns] = average("total", rows, columns)
-    return out
-
-
-def _mirror(quadrant: Array) -> Array:
-    """The whole lattice from the quadrant: xx and yy are even in both offsets, xy odd in both."""
-    _, ny, nx = quadrant.shape
-    out = np.empty((3, 2 * ny - 1, 2 * nx - 1))
-    out[:, ny - 1 :, nx - 1 :] = quadrant
-    sign = np.array([1.0, -1.0, 1.0])[:, None, None]
-    out[:, ny - 1 :, : nx - 1] = sign * quadrant[:, :, :0:-1]
-    out[:, : ny - 1, :] = sign * out[:, : ny - 1 : -1, :]
-    return out
+_VALUE = Quantity(
+    _TENSOR_PARITY,
+    _half_space_value,
+    _response(by_nu=False),
+    lambda gel: (float(gel.thickness or np.inf), 0.0, float(gel.thickness or np.inf)),
+)
+_BY_NU = Quantity(_TENSOR_PARITY, _half_space_by_nu, _response(by_nu=True), lambda gel: (0.0, 0.0, 0.0))
+_BY_THICKNESS = Quantity(_TENSOR_PARITY, _half_space_by_thickness, _response_by_thickness, lambda gel: (1.0, 0.0, 1.0))
+_STRAIN = Quantity(
+    ((True, False), (False, True), (False, True), (True, False), (True, False), (False, True)),
+    _half_space_strain,
+    _response_strain,
+    lambda gel: (0.0,) * 6,
+)
 
 
 def node_kernel(gel: Gel, shape: tuple[int, int], spacing: float, *, receiver: Receiver = "average") -> Array:
@@ -186,8 +132,8 @@ def node_kernel(gel: Gel, shape: tuple[int, int], spacing: float, *, receiver: R
 
     Returns
     -------
-    ``(3, 2 ny - 1, 2 nx - 1)`` m/Pa: K_xx, K_xy = K_yx, K_yy; [:, ny - 1 + dy, nx - 1 + dx] is the displacement at offset
-    (dy, dx) from the source. Exactly even under (dy, dx) -> (-dy, -dx).
+    ``(3, 2 ny - 1, 2 nx - 1)`` m/Pa: K_xx, K_xy = K_yx, K_yy; [:, ny - 1 + dy, nx - 1 + dx] is the displacement at
+    offset (dy, dx) from the source. Exactly even under (dy, dx) -> (-dy, -dx).
 
     Raises
     ------
@@ -197,9 +143,9 @@ def node_kernel(gel: Gel, shape: tuple[int, int], spacing: float, *, receiver: R
     Notes
     -----
     K_ij = integral of G_ij over the source node, averaged over the receiver. Half-space: closed antiderivatives of
-    d_i d_j r near, Gaussian rules far (relative error below 1e-10 everywhere). Layer: plus the smooth difference, or the
-    layer's own response where it has died away; right for any thickness, also far below the spacing, where the node's
-    own value tends to h/G.
+    d_i d_j r near, Gaussian rules far (relative error below 1e-10 everywhere). Layer: plus the smooth difference, or
+    the layer's own response where it has died away; right for any thickness, also far below the spacing, where the
+    node's own value tends to h/G.
 
     Examples
     --------
@@ -211,7 +157,7 @@ def node_kernel(gel: Gel, shape: tuple[int, int], spacing: float, *, receiver: R
     """
     ny, nx, edge = checked_lattice(shape, spacing)
     weight_of(receiver)
-    return _mirror(_quadrant(gel, ny, nx, edge, receiver, "value") / (2.0 * np.pi * gel.shear_modulus))
+    return whole_lattice(_VALUE, gel, ny, nx, edge, receiver)
 
 
 def node_kernel_derivatives(
@@ -221,7 +167,8 @@ def node_kernel_derivatives(
 
     Returns
     -------
-    ``(3, 3, 2 ny - 1, 2 nx - 1)``: [0] m/Pa^2, [1] m/Pa per unit of Poisson ratio (E fixed), [2] 1/Pa (0 on a half-space).
+    ``(3, 3, 2 ny - 1, 2 nx - 1)``: [0] m/Pa^2, [1] m/Pa per unit of Poisson ratio (E fixed), [2] 1/Pa (0 on a
+    half-space).
 
     Raises
     ------
@@ -231,14 +178,46 @@ def node_kernel_derivatives(
     Examples
     --------
     >>> gel = Gel(1e3, 0.5)
-    >>> bool(np.allclose(node_kernel_derivatives(gel, (3, 4), 1e-6)[0], -node_kernel(gel, (3, 4), 1e-6) / 1e3, rtol=1e-12))
+    >>> K, dK = node_kernel(gel, (3, 4), 1e-6), node_kernel_derivatives(gel, (3, 4), 1e-6)
+    >>> bool(np.allclose(dK[0], -K / 1e3, rtol=1e-12))
     True
     """
     ny, nx, edge = checked_lattice(shape, spacing)
     weight_of(receiver)
-    scale = 1.0 / (2.0 * np.pi * gel.shear_modulus)
     value, by_nu, by_thickness = (
-        scale * _quadrant(gel, ny, nx, edge, receiver, kind) for kind in ("value", "by_nu", "by_thickness")
+        whole_lattice(quantity, gel, ny, nx, edge, receiver) for quantity in (_VALUE, _BY_NU, _BY_THICKNESS)
     )
-    parts = (-value / gel.youngs_modulus, by_nu + value / (1.0 + gel.poisson), by_thickness)
-    return np.stack([_mirror(part) for part in parts])
+    return np.stack([-value / gel.youngs_modulus, by_nu + value / (1.0 + gel.poisson), by_thickness])
+
+
+def node_strain_kernel(gel: Gel, shape: tuple[int, int], spacing: float) -> Array:
+    """In-plane strain, averaged over a node, per pascal of traction on another node.
+
+    Parameters
+    ----------
+    gel, shape, spacing
+        As in :func:`node_kernel`.
+
+    Returns
+    -------
+    ``(3, 2, 2 ny - 1, 2 nx - 1)`` 1/Pa: [ij, c] is the strain (e_xx, e_xy, e_yy) by a traction along c = x, y. Exactly
+    odd under (dy, dx) -> (-dy, -dx).
+
+    Raises
+    ------
+    InputError
+        For a shape or spacing that makes no sense.
+
+    Notes
+    -----
+    The strain of piecewise constant traction is infinite (as a logarithm) on the edges where traction jumps; its
+    average over a node is finite, and exact here.
+
+    Examples
+    --------
+    >>> K = node_strain_kernel(Gel(1e3, 0.5), (3, 4), 1e-6)
+    >>> K.shape, float(K[0, 0, 2, 3]), bool(K[0, 0, 2, 4] < 0)  # pulled along x: compressed in front
+    ((3, 2, 5, 7), 0.0, True)
+    """
+    ny, nx, edge = checked_lattice(shape, spacing)
+    return whole_lattice(_STRAIN, gel, ny, nx, edge, "average").reshape(3, 2, 2 * ny - 1, 2 * nx - 1)

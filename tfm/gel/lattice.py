@@ -1,13 +1,13 @@
 """Averages over square nodes: quadrature rules, and the half-space's lattice in closed form.
 
 The source is one square node of edge 1. With ``receiver="average"`` the displacement is averaged over a square of the
-same size: both squares together weigh the separation with a tent (1 - |t|) along each axis. With ``receiver="point"`` the
-weight is the box of the source alone.
+same size: both squares together weigh the separation with a tent (1 - |t|) along each axis. With ``receiver="point"``
+the weight is the box of the source alone.
 
 A half-space needs the averages of d_i d_j r only, because 1/r = d_x d_x r + d_y d_y r. Their antiderivatives are
 elementary (integrate r twice by parts), so near the source the averages are differences of closed forms. Far away those
-differences would cancel to nothing; there the function is smooth on the scale of a node, and its average is a short filter
-of its values at the nodes.
+differences would cancel to nothing; there the function is smooth on the scale of a node, and its average is a short
+filter of its values at the nodes.
 """
 
 from __future__ import annotations
@@ -25,6 +25,7 @@ __all__ = [
     "FAR",
     "box",
     "filtered_average",
+    "half_space_gradient_lattice",
     "half_space_lattice",
     "node_filter",
     "node_rule",
@@ -71,7 +72,8 @@ def weight_of(receiver: str) -> Callable[[Array], Array]:
 def node_rule(receiver: str, count: int) -> tuple[Array, Array]:
     """Gaussian rule of ``count`` points for the weight: exact for polynomials up to degree 2 count - 1.
 
-    Golub & Welsch, Math Comp 23:221, 1969, with the recurrence found by Stieltjes' procedure on a fine Gauss-Legendre rule.
+    Golub & Welsch, Math Comp 23:221, 1969, with the recurrence found by Stieltjes' procedure on a fine Gauss-Legendre
+    rule.
     """
     if receiver == "point":
         points, weights = np.polynomial.legendre.leggauss(count)
@@ -96,8 +98,8 @@ def node_rule(receiver: str, count: int) -> tuple[Array, Array]:
 def node_filter(receiver: str, order: int) -> Array:
     """``(2 order + 1,)`` symmetric filter: values at the nodes -> average with the weight, error of order 2 order + 2.
 
-    With D = d/dt and the central difference delta = 2 sinh(D/2), the box averages by delta / D and the tent by its square;
-    D = 2 asinh(delta/2) turns that into a power series in delta^2.
+    With D = d/dt and the central difference delta = 2 sinh(D/2), the box averages by delta / D and the tent by its
+    square; D = 2 asinh(delta/2) turns that into a power series in delta^2.
     """
     # asinh(x)/x = sum (-1)^n (2n)! / (4^n n!^2 (2n + 1)) x^(2n); then its reciprocal, with x = delta / 2
     series = np.empty(order + 1)
@@ -204,5 +206,45 @@ def half_space_lattice(receiver: str, ny: int, nx: int) -> Array:
         out[:, rows, columns] = weighted_average(_far, rows, columns, node_rule(receiver, 4))
     for rows, columns in rectangles(FAR, max(ny, nx), (ny, nx)):
         out[:, rows, columns] = filtered_average(_far, rows, columns, node_filter(receiver, 5))
+    out.flags.writeable = False
+    return out
+
+
+def _far_gradient(x: Array, y: Array) -> Array:
+    """d_xxx r, d_xxy r, d_xyy r, d_yyy r."""
+    square = x * x + y * y
+    fifth = 1.0 / (square * square * np.sqrt(square))
+    return np.stack(
+        [
+            -3.0 * x * y * y * fifth,
+            (2.0 * x * x * y - y**3) * fifth,
+            (2.0 * y * y * x - x**3) * fifth,
+            -3.0 * y * x * x * fifth,
+        ]
+    )
+
+
+@lru_cache(maxsize=4)
+def half_space_gradient_lattice(ny: int, nx: int) -> Array:
+    """``(4, ny, nx)`` tent averages of d_xxx r, d_xxy r, d_xyy r, d_yyy r at offsets dy, dx >= 0 (read-only,
+    cached)."""
+    out = np.empty((4, ny, nx))
+    near_y, near_x = min(ny, _CLOSED), min(nx, _CLOSED)
+    y, x = np.arange(-1.0, near_y + 1.0)[:, None], np.arange(-1.0, near_x + 1.0)[None, :]
+    r = np.hypot(x, y)
+    along_y, along_x = _log_ratio(x, y), _log_ratio(y, x)
+    parts = np.stack(  # twice integrated in x and twice in y
+        [
+            x * y * along_y - x * r,
+            0.5 * (y * r + x * x * along_y),
+            0.5 * (x * r + y * y * along_x),
+            x * y * along_x - y * r,
+        ]
+    )
+    out[:, :near_y, :near_x] = np.diff(np.diff(parts, n=2, axis=1), n=2, axis=2)
+    for rows, columns in rectangles(_CLOSED, FAR, (ny, nx)):
+        out[:, rows, columns] = weighted_average(_far_gradient, rows, columns, node_rule("average", 4))
+    for rows, columns in rectangles(FAR, max(ny, nx), (ny, nx)):
+        out[:, rows, columns] = filtered_average(_far_gradient, rows, columns, node_filter("average", 5))
     out.flags.writeable = False
     return out

@@ -2,8 +2,8 @@
 
 Columns are a_0..a_3 and b_1..b_5 of :mod:`tfm.gel.radial` in units of 1/(2 pi G) and of the thickness, at rho = r/h.
 
-Near: layer minus half-space is a Hankel integral of what the layer lacks in Fourier space. That decays as exp(-2 s), so the
-integral is a power series in rho^2 with radius of convergence 2, whose coefficients are moments of the deficit.
+Near: layer minus half-space is a Hankel integral of what the layer lacks in Fourier space. That decays as exp(-2 s), so
+the integral is a power series in rho^2 with radius of convergence 2, whose coefficients are moments of the deficit.
 
 Away: the Hankel integral of the layer itself is closed in the upper half plane and becomes a sum over the poles of g_T
 (i (n + 1/2) pi, residue 1) and g_L (one imaginary pole and one complex pair per strip, by Newton's method) of Hankel

@@ -101,7 +101,9 @@ class Gel:
         correlation = _number("modulus_poisson_correlation", self.modulus_poisson_correlation, "give -1 to 1")
         if not -1.0 <= correlation <= 1.0:
             raise InputError(
-                f"modulus_poisson_correlation is {correlation:g}, outside -1 to 1", code="bad-gel", remedy="give -1 to 1"
+                f"modulus_poisson_correlation is {correlation:g}, outside -1 to 1",
+                code="bad-gel",
+                remedy="give -1 to 1",
             )
         values["modulus_poisson_correlation"] = correlation
         for name, value in values.items():  # numpy scalars become floats, so that gels compare, hash and print alike

@@ -10,38 +10,21 @@ import scipy.fft
 from numpy.typing import ArrayLike, NDArray
 
 from tfm.errors import InputError
-from tfm.gel.kernel import Receiver, checked_lattice, node_kernel
+from tfm.gel.assembly import checked_field, checked_lattice
+from tfm.gel.kernel import Receiver, node_kernel
 from tfm.gel.model import Gel
 
-__all__ = ["SurfaceOperator", "displacement"]
+__all__ = ["SurfaceOperator", "displacement", "padded_shape", "wrapped_kernel"]
 
 Array = NDArray[np.float64]
-
-
-def checked_field(name: str, field: ArrayLike, components: int) -> NDArray[Any]:
-    """A finite ``(components, ny, nx)`` array.
-
-    Raises
-    ------
-    InputError
-        For another shape or values that are not finite.
-    """
-    array = np.asarray(field)
-    if array.ndim != 3 or array.shape[0] != components:
-        raise InputError(
-            f"{name} has shape {array.shape}", code="bad-field", remedy=f"give an array ({components}, ny, nx), x first"
-        )
-    if not np.all(np.isfinite(array)):
-        raise InputError(f"{name} holds values that are not finite", code="bad-field", remedy="set unknown nodes to 0")
-    return array
 
 
 class SurfaceOperator:
     """The kernel of a lattice, transformed once, to be applied many times.
 
     The convolution is aperiodic: fields are padded with zeros to at least 2 n - 1 nodes a side, so nothing wraps around
-    and the result is the direct sum to rounding. The transform of the kernel is real (the kernel is even), and only the rows that
-    hold data are transformed along x.
+    and the result is the direct sum to rounding. The transform of the kernel is real (the kernel is even), and only the
+    rows that hold data are transformed along x.
 
     Parameters
     ----------
@@ -106,29 +89,35 @@ class SurfaceOperator:
         return _apply(self._transform, field.astype(self.dtype, copy=False), self.workers)
 
 
-def _padded(shape: tuple[int, int]) -> tuple[int, int]:
+def padded_shape(shape: tuple[int, int]) -> tuple[int, int]:
+    """Lengths of at least 2 n - 1 that transform quickly: nothing wraps around."""
     return (
         scipy.fft.next_fast_len(2 * shape[0] - 1, real=False),
         scipy.fft.next_fast_len(2 * shape[1] - 1, real=True),
     )
 
 
-def _transformed(kernel: NDArray[Any], dtype: Any, workers: int) -> NDArray[Any]:
-    """Real transform ``(3, my, mx // 2 + 1)`` of the kernel with its centre moved to [0, 0]."""
+def wrapped_kernel(kernel: NDArray[Any]) -> Array:
+    """The kernel ``(m, 2 ny - 1, 2 nx - 1)`` padded for the transform, its centre moved to [0, 0]."""
     ny, nx = (kernel.shape[1] + 1) // 2, (kernel.shape[2] + 1) // 2
-    my, mx = _padded((ny, nx))
-    padded = np.zeros((3, my, mx))
-    padded[:, :ny, :nx] = kernel[:, ny - 1 :, nx - 1 :]
-    padded[:, :ny, mx - nx + 1 :] = kernel[:, ny - 1 :, : nx - 1]
-    padded[:, my - ny + 1 :, :nx] = kernel[:, : ny - 1, nx - 1 :]
-    padded[:, my - ny + 1 :, mx - nx + 1 :] = kernel[:, : ny - 1, : nx - 1]
-    transform = scipy.fft.rfft2(padded, workers=workers, overwrite_x=True).real
+    my, mx = padded_shape((ny, nx))
+    out = np.zeros((kernel.shape[0], my, mx))
+    out[:, :ny, :nx] = kernel[:, ny - 1 :, nx - 1 :]
+    out[:, :ny, mx - nx + 1 :] = kernel[:, ny - 1 :, : nx - 1]
+    out[:, my - ny + 1 :, :nx] = kernel[:, : ny - 1, nx - 1 :]
+    out[:, my - ny + 1 :, mx - nx + 1 :] = kernel[:, : ny - 1, : nx - 1]
+    return out
+
+
+def _transformed(kernel: NDArray[Any], dtype: Any, workers: int) -> NDArray[Any]:
+    """Transform ``(3, my, mx // 2 + 1)`` of an even kernel, which is real."""
+    transform = scipy.fft.rfft2(wrapped_kernel(kernel), workers=workers, overwrite_x=True).real
     return np.ascontiguousarray(transform.astype(dtype, copy=False))
 
 
 def _apply(transform: NDArray[Any], field: NDArray[Any], workers: int) -> NDArray[Any]:
     ny, nx = field.shape[1:]
-    my, mx = _padded((ny, nx))
+    my, mx = padded_shape((ny, nx))
     spectrum = scipy.fft.rfft(field, n=mx, axis=2, workers=workers)
     spectrum = scipy.fft.fft(spectrum, n=my, axis=1, workers=workers, overwrite_x=True)
     x, y = spectrum
@@ -163,7 +152,8 @@ def displacement(
     spacing
         m, edge of a node.
     kernel
-        A :func:`tfm.gel.node_kernel` of this lattice to use instead of the node-averaged one; must be even, as those are.
+        A :func:`tfm.gel.node_kernel` of this lattice to use instead of the node-averaged one; must be even, as those
+        are.
     workers
         Threads for the transforms.
 

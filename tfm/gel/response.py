@@ -28,7 +28,9 @@ def _wave_numbers(k: ArrayLike) -> NDArray[np.float64]:
     array = np.asarray(k, dtype=np.float64)
     if not np.all(np.isfinite(array)) or np.any(array < 0.0):
         raise InputError(
-            "k holds values that are negative or not finite", code="bad-wave-number", remedy="give magnitudes in 1/m, 0 or more"
+            "k holds values that are negative or not finite",
+            code="bad-wave-number",
+            remedy="give magnitudes in 1/m, 0 or more",
         )
     return array
 

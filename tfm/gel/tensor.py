@@ -10,6 +10,7 @@ from tfm.gel.model import Gel
 from tfm.gel.radial import RadialFunctions, radial_functions
 
 __all__ = [
+    "assemble_gradient",
     "assemble_tensor",
     "positions",
     "surface_tensor",
@@ -49,6 +50,21 @@ def assemble_tensor(x: Array, y: Array, f: RadialFunctions) -> Array:
     return np.stack([diagonal - x * x * b2, -x * y * b2, diagonal - y * y * b2])
 
 
+def assemble_gradient(x: Array, y: Array, f: RadialFunctions) -> Array:
+    """d_k (G_xx, G_xy, G_yy), ``(2, 3, ...)``, from the columns of order 1."""
+    a1, b2, b3 = f["a1"], f["b2"], f["b3"]
+    out = np.empty((2, 3, *np.broadcast(x, y).shape))
+    xx, yy = x * x, y * y
+    along = a1 - b2
+    out[0, 0] = x * (along - 2.0 * b2 - xx * b3)
+    out[0, 1] = -y * (b2 + xx * b3)
+    out[0, 2] = x * (along - yy * b3)
+    out[1, 0] = y * (along - xx * b3)
+    out[1, 1] = -x * (b2 + yy * b3)
+    out[1, 2] = y * (along - 2.0 * b2 - yy * b3)
+    return out
+
+
 def surface_tensor(gel: Gel, x: ArrayLike, y: ArrayLike) -> Array:
     """Surface displacement at (x, y) per newton of in-plane force at the origin.
 
@@ -70,9 +86,9 @@ def surface_tensor(gel: Gel, x: ArrayLike, y: ArrayLike) -> Array:
 
     Notes
     -----
-    Half-space: G_ij = (1 + nu)/(pi E r) [(1 - nu) delta_ij + nu r_i r_j / r^2] (Landau & Lifshitz, *Theory of Elasticity*,
-    sec. 8; Johnson 1985, ch. 3). Layer: see :mod:`tfm.gel.radial`; relative accuracy 1e-12 where the response is above
-    1e-18 of the half-space's, 0 beyond 60 thicknesses.
+    Half-space: G_ij = (1 + nu)/(pi E r) [(1 - nu) delta_ij + nu r_i r_j / r^2] (Landau & Lifshitz, *Theory of
+    Elasticity*, sec. 8; Johnson 1985, ch. 3). Layer: see :mod:`tfm.gel.radial`; relative accuracy 1e-12 where the
+    response is above 1e-18 of the half-space's, 0 beyond 60 thicknesses.
 
     Examples
     --------
@@ -99,8 +115,8 @@ def surface_tensor_gradient(gel: Gel, x: ArrayLike, y: ArrayLike) -> Array:
 
     Notes
     -----
-    d_k G_ij = delta_ij r_k a_1 - (delta_ij r_k + delta_ik r_j + delta_jk r_i) b_2 - r_i r_j r_k b_3 with the radial functions
-    of :mod:`tfm.gel.radial`. Closed form on a half-space.
+    d_k G_ij = delta_ij r_k a_1 - (delta_ij r_k + delta_ik r_j + delta_jk r_i) b_2 - r_i r_j r_k b_3 with the radial
+    functions of :mod:`tfm.gel.radial`. Closed form on a half-space.
 
     Examples
     --------
@@ -109,14 +125,7 @@ def surface_tensor_gradient(gel: Gel, x: ArrayLike, y: ArrayLike) -> Array:
     -4774648.293
     """
     x_array, y_array, r = positions(x, y)
-    f = radial_functions(gel, r, 1)
-    out = np.empty((2, 3, *r.shape))
-    vector = (x_array, y_array)
-    for k in range(2):
-        for column, (i, j) in enumerate(((0, 0), (0, 1), (1, 1))):
-            perms = (i == j) * vector[k] + (i == k) * vector[j] + (j == k) * vector[i]
-            out[k, column] = (i == j) * vector[k] * f["a1"] - perms * f["b2"] - vector[i] * vector[j] * vector[k] * f["b3"]
-    return out / (2.0 * np.pi * gel.shear_modulus)
+    return assemble_gradient(x_array, y_array, radial_functions(gel, r, 1)) / (2.0 * np.pi * gel.shear_modulus)
 
 
 def surface_tensor_second_gradient(gel: Gel, x: ArrayLike, y: ArrayLike) -> Array:
@@ -162,8 +171,8 @@ def surface_tensor_derivatives(gel: Gel, x: ArrayLike, y: ArrayLike) -> Array:
 
     Returns
     -------
-    ``(3, 3, ...)``: [0] per Pa, [1] per unit of Poisson ratio (E fixed), [2] per metre of thickness (0 on a half-space);
-    second index (G_xx, G_xy, G_yy).
+    ``(3, 3, ...)``: [0] per Pa, [1] per unit of Poisson ratio (E fixed), [2] per metre of thickness (0 on a
+    half-space); second index (G_xx, G_xy, G_yy).
 
     Raises
     ------
