@@ -96,7 +96,7 @@ class LabelFollower:
         for cell in cells:
             if cell not in mapping and cell not in self._used and cell not in mapping.values():
                 mapping[cell] = cell
-        free = max([0, *self._used, *mapping.values(), *cells]) + 1
+        free = max([0, *self._used, *mapping.values()]) + 1
         for cell in cells:
             if cell not in mapping:
                 mapping[cell] = free
