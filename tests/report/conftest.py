@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import csv
 import json
 import shutil
 from collections.abc import Callable
@@ -12,25 +11,19 @@ from typing import Any
 import numpy as np
 import pytest
 
+from tfm.batch.atomic import file_sha256
 from tfm.batch.netcdf import FieldWriter
 from tfm.batch.pictures import Thumbnails
+from tfm.batch.schema import TABLES
+from tfm.batch.tables import columns_json, table_text
 
-CELLS = ["field", "cell", "frame", "time_s", "condition", "status", "notes", "x_um", "y_um", "area_um2", "outline_axis_deg", "dipole_xx_pNm", "dipole_xy_pNm", "dipole_yy_pNm", "dipole_xx_sd_pNm", "dipole_xy_sd_pNm", "dipole_yy_sd_pNm", "cov_xx_xy_pNm2", "cov_xx_yy_pNm2", "cov_xy_yy_pNm2", "major_pNm", "minor_pNm", "axis_deg", "axis_sd_deg", "anisotropy", "contractile_moment_pNm", "contractile_moment_sd_pNm", "contractile_moment_total_sd_pNm", "net_force_nN", "torque_pNm", "force_total_nN", "strain_energy_fJ", "strain_energy_sd_fJ", "traction_peak_Pa", "traction_rms_Pa", "displacement_peak_um"]
-PAIRS = ["field", "frame", "cell_a", "cell_b", "distance_um", "bearing_deg", "energy_fJ", "energy_sd_fJ", "dipole_energy_fJ", "dipole_energy_sd_fJ", "force_on_b_x_pN", "force_on_b_y_pN", "torque_on_b_fNm", "coupling_number", "status", "notes"]
-GEL = ["field", "youngs_modulus_Pa", "poisson", "thickness_um", "poisson_best", "poisson_low", "poisson_high", "thickness_best_um", "thickness_low_um", "thickness_high_um", "strain_energy_fJ", "energy_shift_poisson_fJ", "strain_peak", "verdict", "notes"]
-FIELDS = (
-    ["field", "frame", "status", "message", "drift_x_px", "drift_y_px", "displacement_noise_um", "vectors", "vectors_rejected", "misfit"]
-)
+Rows = dict[str, list[dict[str, Any]]]
 
 #: (condition, Young's modulus in Pa, mean moment in pN m)
 GROUPS = (("soft 2 kPa", 2000.0, 0.6), ("middle 6 kPa", 6000.0, 1.2), ("stiff 18 kPa", 18000.0, 2.1))
-
-
-def _write(path: Path, columns: list[str], rows: list[dict[str, Any]]) -> None:
-    with path.open("w", newline="", encoding="utf-8") as stream:
-        writer = csv.DictWriter(stream, columns, restval="")
-        writer.writeheader()
-        writer.writerows({k: f"{v:.6g}" if isinstance(v, float) else v for k, v in row.items()} for row in rows)
+CUT = "the stressed image is cut after 60 % of its rows [cut-file]"
+MISFIT = "misfit 2.61: the gel model does not explain these beads"
+BUDGET = {"images": 0.0025, "youngs_modulus": 0.004, "poisson": 0.0006, "thickness": 0.0, "pixel": 0.0001}
 
 
 def _cell(rng: np.random.Generator, moment: float, axis: float, x: float, y: float) -> dict[str, Any]:
@@ -125,142 +118,101 @@ def _arrays(
             file.put(frame, grown | {"labels": labels} | small)
 
 
-def make_folder(root: Path, *, fields: int = 9, bad: int = 2, arrays: bool = True, seed: int = 7) -> Path:
+def _name(i: int) -> str:
+    return "<script>alert(1)</script>" if i == 1 else f"plate-{i + 1:03d}"
+
+
+def _sheet_row(i: int) -> dict[str, str]:
+    label, modulus, _ = GROUPS[i % 3]
+    return {
+        "field": _name(i),
+        "stressed": f"img/{i}_s.tif",
+        "relaxed": "quietest" if i == 4 else f"img/{i}_r.tif",
+        "outline": f"img/{i}, outlines.tif",
+        "youngs_modulus [kPa]": f"{modulus / 1000:g}",
+        "poisson": "0.45",
+        "condition": label,
+    }
+
+
+def _gel(modulus: float, wrong: bool) -> dict[str, Any]:
+    return {
+        "youngs_modulus_Pa": modulus, "poisson": 0.45, "thickness_um": 40.0, "poisson_best": 0.44, "poisson_low": 0.41,
+        "poisson_high": 0.48, "strain_energy_fJ": 30.0, "energy_shift_poisson_fJ": -3.2,
+        "strain_peak": 0.31 if wrong else 0.08, "verdict": "doubtful" if wrong else "agrees",
+    }  # fmt: skip
+
+
+def _pair() -> dict[str, Any]:
+    return {
+        "frame": 0, "cell_a": 1, "cell_b": 2, "distance_um": 34.2, "bearing_deg": 6.7, "energy_fJ": -0.84,
+        "energy_sd_fJ": 0.11, "dipole_energy_fJ": -0.79, "dipole_energy_sd_fJ": 0.1, "force_on_b_x_pN": -61.0,
+        "force_on_b_y_pN": -8.0, "torque_on_b_fNm": 0.4, "coupling_number": 2.1, "status": "ok",
+    }  # fmt: skip
+
+
+def _measured(i: int, rng: np.random.Generator, wrong: bool) -> tuple[Rows, list[dict[str, Any]], list[Any]]:
+    """Rows, error budget and centres of one field that gave numbers."""
+    _, modulus, mean = GROUPS[i % 3]
+    pair, series, status = i % 4 == 2, i == 4, "caution" if wrong else "ok"
+    centres = [(22e-6, 36e-6, 0.4, 0.9), (56e-6, 40e-6, -0.5, 1.1)] if pair else [(38e-6, 38e-6, 0.3 + i, 1.0)]
+    rows: Rows = {"fields": [], "cells": [], "pairs": [_pair()] if pair else [], "gel": [_gel(modulus, wrong)]}
+    budget = []
+    for frame in range(5 if series else 1):
+        rows["fields"].append(
+            {"frame": frame, "status": status, "message": MISFIT if wrong else "", "drift_x_px": 2.0, "drift_y_px": 1.0,
+             "displacement_noise_um": 0.02, "vectors": 2209, "vectors_rejected": 31, "misfit": 2.61 if wrong else 1.04}
+        )  # fmt: skip
+        for number, (cx, cy, axis, size) in enumerate(centres, 1):
+            moment = float(mean * size * rng.lognormal(0, 0.25) * (1 + 0.15 * frame))
+            row = _cell(rng, moment, (axis + np.pi / 2) % np.pi - np.pi / 2, cx * 1e6, cy * 1e6)
+            row |= {"cell": number, "frame": frame, "status": status, "notes": MISFIT if wrong else ""}
+            rows["cells"].append(row | ({"time_s": 60.0 * frame} if series else {}))
+            budget.append({"cell": number, "frame": frame, "variance_pNm2": BUDGET})
+    return rows, budget, centres
+
+
+def make_folder(
+    root: Path, *, fields: int = 9, bad: int = 2, arrays: bool = True, unfinished: int = 0, seed: int = 7
+) -> Path:
     """Write a results folder: ``fields`` fields in three conditions, the last ``bad`` of them with something wrong."""
     rng = np.random.default_rng(seed)
     (root / "fields").mkdir(parents=True, exist_ok=True)
-    tables: dict[str, list[dict[str, Any]]] = {"cells": [], "pairs": [], "gel": [], "fields": [], "sheet": []}
+    tables: Rows = {name: [] for name in TABLES}
+    entries = []
     for i in range(fields):
-        name = "<script>alert(1)</script>" if i == 1 else f"plate-{i + 1:03d}"
-        label, modulus, mean = GROUPS[i % 3]
-        pair, series = i % 4 == 2, i == 4
+        given = {"field": _name(i), "condition": GROUPS[i % 3][0]}
         wrong = i >= fields - bad
-        tables["sheet"].append(
-            {
-                "field": name,
-                "stressed": f"img/{i}_s.tif",
-                "relaxed": "quietest" if series else f"img/{i}_r.tif",
-                "outline": f"img/{i}_o.tif",
-                "youngs_modulus": f"{modulus / 1000:g} kPa",
-                "poisson": "0.45",
-                "thickness": "40 um",
-                "condition": label,
-            }
-        )
-        centres = [(38e-6, 38e-6, 0.3 + i, 1.0)] if not pair else [(22e-6, 36e-6, 0.4, 0.9), (56e-6, 40e-6, -0.5, 1.1)]
-        if wrong and i % 2:
-            tables["fields"].append(
-                {
-                    "field": name,
-                    "frame": 0,
-                    "status": "failed",
-                    "message": "the stressed image is cut after 60 % of its rows [cut-file]",
-                }
-            )
-            (root / "fields" / f"f{i}.json").write_text(json.dumps({"field": name, "sheet": tables["sheet"][-1]}))
+        entry: dict[str, Any] = {"field": _name(i), "row": i + 2, "finished": i < fields - unfinished}
+        if (wrong and i % 2) or not entry["finished"]:
+            text = CUT if entry["finished"] else "not computed yet"
+            tables["fields"].append({**given, "frame": 0, "status": "failed", "message": text})
+            tables["gel"].append({**given, "notes": "the field was not measured"})
+            entries.append({**entry, "status": "failed", "message": text, "record": ""})
             continue
-        note = "misfit 2.61 is above 1.5: the gel model does not explain these beads" if wrong else ""
-        for frame in range(5 if series else 1):
-            tables["fields"].append(
-                {
-                    "field": name,
-                    "frame": frame,
-                    "status": "caution" if wrong else "ok",
-                    "message": note,
-                    "drift_x_px": 2.0,
-                    "drift_y_px": 1.0,
-                    "displacement_noise_um": 0.02,
-                    "vectors": 2209,
-                    "vectors_rejected": 31,
-                    "misfit": 2.61 if wrong else 1.04,
-                }
-            )
-            for number, (cx, cy, axis, size) in enumerate(centres, 1):
-                moment = float(mean * size * rng.lognormal(0, 0.25) * (1 + 0.15 * frame))
-                row = _cell(rng, moment, (axis + np.pi / 2) % np.pi - np.pi / 2, cx * 1e6, cy * 1e6)
-                tables["cells"].append(
-                    row
-                    | {
-                        "field": name,
-                        "cell": number,
-                        "frame": frame,
-                        "time_s": 60.0 * frame if series else "",
-                        "condition": label,
-                        "status": "caution" if wrong else "ok",
-                        "notes": note,
-                    }
-                )
-            if pair:
-                tables["pairs"].append(
-                    {
-                        "field": name,
-                        "frame": frame,
-                        "cell_a": 1,
-                        "cell_b": 2,
-                        "distance_um": 34.2,
-                        "bearing_deg": 6.7,
-                        "energy_fJ": -0.84,
-                        "energy_sd_fJ": 0.11,
-                        "dipole_energy_fJ": -0.79,
-                        "dipole_energy_sd_fJ": 0.1,
-                        "force_on_b_x_pN": -61.0,
-                        "force_on_b_y_pN": -8.0,
-                        "torque_on_b_fNm": 0.4,
-                        "coupling_number": 2.1,
-                        "status": "ok",
-                    }
-                )
-        tables["gel"].append(
-            {
-                "field": name,
-                "youngs_modulus_Pa": modulus,
-                "poisson": 0.45,
-                "thickness_um": 40.0,
-                "poisson_best": 0.44,
-                "poisson_low": 0.41,
-                "poisson_high": 0.48,
-                "strain_energy_fJ": 30.0,
-                "energy_shift_poisson_fJ": -3.2,
-                "strain_peak": 0.31 if wrong else 0.08,
-                "verdict": "contradicted" if wrong else "agrees",
-            }
-        )
-        record = {
-            "field": name,
-            "sheet": tables["sheet"][-1],
-            "budget": {
-                str(n): {
-                    "images": 0.0025,
-                    "youngs_modulus": 0.004,
-                    "poisson": 0.0006,
-                    "thickness": 0.0,
-                    "pixel": 0.0001,
-                }
-                for n in range(1, len(centres) + 1)
-            },
-            "seconds": 1.3,
-        }
-        (root / "fields" / f"f{i}.json").write_text(json.dumps(record))
+        rows, budget, centres = _measured(i, rng, wrong)
+        for name, found in rows.items():
+            tables[name] += [{**given, **row} for row in found]
+        record = {"field": _name(i), "budget": budget, "outputs": {}, "seconds": {"all": 1.3}}
         if arrays:
             # Many fields share a few pictures: what is tested is the report, and drawing beads takes time.
             target = root / "fields" / f"f{i}.nc"
             if i < 5:
-                _arrays(target, rng, centres, 5 if series else 1)
+                _arrays(target, rng, centres, 5 if i == 4 else 1)
             else:
-                shutil.copy(root / "fields" / ("f2.nc" if pair else "f0.nc"), target)
-    for table, columns in (("cells", CELLS), ("pairs", PAIRS), ("gel", GEL), ("fields", FIELDS)):
-        _write(root / f"{table}.csv", columns, tables[table])
-    meanings = {
-        c: {"unit": c.rsplit("_", 1)[-1] if "_" in c else "", "meaning": f"invented meaning of {c}"}
-        for c in [*CELLS, *PAIRS, *GEL, *FIELDS]
-    }
-    (root / "columns.json").write_text(json.dumps(meanings))
-    run = {
-        "sheet_rows": tables["sheet"],
-        "settings": {"method": "image"},
-        "versions": {"tugtensor": "0.1.0", "numpy": np.__version__},
-    }
-    (root / "run.json").write_text(json.dumps(run))
+                shutil.copy(root / "fields" / ("f2.nc" if i % 4 == 2 else "f0.nc"), target)
+            record["outputs"] = {target.name: file_sha256(target)}
+        (root / "fields" / f"f{i}.json").write_text(json.dumps(record))
+        message = MISFIT if wrong else ""
+        entries.append(
+            {**entry, "status": "caution" if wrong else "ok", "message": message, "record": f"fields/f{i}.json"}
+        )
+    for name, rows in tables.items():
+        (root / f"{name}.csv").write_text(table_text(name, rows), encoding="utf-8")
+    (root / "columns.json").write_text(columns_json(), encoding="utf-8")
+    run = {"tfm": "0.1.0", "settings": {"method": "image"}, "versions": {"numpy": np.__version__}, "fields": entries}
+    run["sheet_rows"] = [_sheet_row(i) for i in range(fields)]
+    (root / "run.json").write_text(json.dumps(run), encoding="utf-8")
     return root
 
 

@@ -95,6 +95,14 @@ def _unexplained(a: FieldArrays) -> Array | None:
     return np.asarray(left - np.nanmedian(left, axis=(1, 2), keepdims=True))
 
 
+def _coarse(x: Array, y: Array, image: Array, *, largest: int = 256) -> tuple[Array, Array, Array]:
+    """The picture as means over blocks, at most ``largest`` pixels wide: structure shows better than single pixels."""
+    n = max(-(-max(image.shape) // largest), 1)
+    ny, nx = image.shape[0] // n, image.shape[1] // n
+    small = image[: ny * n, : nx * n].reshape(ny, n, nx, n).mean(axis=(1, 3))
+    return x[: nx * n].reshape(nx, n).mean(axis=1), y[: ny * n].reshape(ny, n).mean(axis=1), small
+
+
 def residual_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
     """Observed minus predicted displacement in units of its own error, and what is left of the images."""
     limits, left, sd = map_limits(a), _unexplained(a), noise_of(field, a.frame)
@@ -106,10 +114,11 @@ def residual_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
             top = 4.0 if sd else max(float(np.nanpercentile(np.abs(values), 99)), 1e-6)
             maps.append((f"Displacement: observed − predicted, {name}", a.x, a.y, values, top, unit))
     if a.residual is not None and a.xi is not None and a.yi is not None:
-        top = max(float(np.percentile(np.abs(a.residual), 99.5)), 1e-9)
-        values = np.round(a.residual / top * 12) / 12 * top
+        x, y, values = _coarse(a.xi, a.yi, a.residual)
+        top = max(float(np.percentile(np.abs(values), 99.5)), 1e-9)
+        values = np.round(values / top * 12) / 12 * top
         words = "standard deviations of the relaxed image"
-        maps.append(("Images: stressed, moved back − relaxed", a.xi, a.yi, values, top, words))
+        maps.append(("Images: stressed, moved back − relaxed", x, y, values, top, words))
     if limits is None or not maps:
         return None
     panels = Panels.row([limits] * len(maps), [m[0] for m in maps])

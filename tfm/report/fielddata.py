@@ -4,9 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
 
-import h5netcdf
+import h5py
 import numpy as np
 from numpy.typing import NDArray
 
@@ -60,50 +59,47 @@ class FieldArrays:
         return float(self.xi[1] - self.xi[0] - 2 * self.xi[0])
 
 
-def _take(file: Any, name: str, frame: int, dimensions: int) -> Array | None:
+def _take(file: h5py.File, name: str, frame: int, dimensions: int) -> Array | None:
     """One frame of a variable with its scale factor; None when absent or NaN throughout."""
-    if name not in file.variables:
+    if name not in file:
         return None
-    variable = file.variables[name]
+    variable = file[name]
     if variable.ndim > dimensions:
         if variable.shape[0] == 0:
             return None
         raw = variable[min(frame, variable.shape[0] - 1)]
     else:
         raw = variable[...]
-    values = np.asarray(raw, dtype=float) * float(variable.attrs.get("scale_factor", 1.0))
+    values = np.asarray(raw, dtype=float) * float(np.ravel(variable.attrs.get("scale_factor", 1.0))[0])
     return values if values.ndim == dimensions and values.size and np.isfinite(values).any() else None
 
 
-def _axis(file: Any, like: str, position: int) -> Array | None:
-    """Positions (m) along one of the last dimensions of a variable."""
-    if like not in file.variables:
+def _axis(file: h5py.File, name: str) -> Array | None:
+    """Positions (m) along a dimension, if there are at least two."""
+    if name not in file or file[name].shape[0] < 2:
         return None
-    name = file.variables[like].dimensions[position]
-    if name not in file.variables or file.variables[name].shape[0] < 2:
-        return None
-    factor = 1e-6 if file.variables[name].attrs.get("units") in ("um", "micrometer") else 1.0
-    return np.asarray(file.variables[name][...], dtype=float) * factor
+    return np.asarray(file[name][...], dtype=float)
 
 
 def read_arrays(path: Path, *, frame: int = 0) -> FieldArrays:
-    """The arrays of one frame of ``fields/<field>.nc``."""
-    with h5netcdf.File(path, "r") as file:
+    """The arrays of one frame of ``fields/<field>.nc``, laid out as :mod:`tfm.batch.netcdf` says."""
+    with h5py.File(path, "r") as file:
         labels = _take(file, "labels", frame, 2)
+        frames = [file[n].shape[0] for n in ("traction", "displacement", "stressed_image") if n in file]
         return FieldArrays(
             frame=frame,
-            frames=max(int(file.dimensions["frame"].size), 1) if "frame" in file.dimensions else 1,
-            x=_axis(file, "displacement", -1),
-            y=_axis(file, "displacement", -2),
+            frames=max(frames, default=1),
+            x=_axis(file, "x"),
+            y=_axis(file, "y"),
             u=_take(file, "displacement", frame, 3),
             precision=_take(file, "displacement_precision", frame, 3),
-            xt=_axis(file, "traction", -1),
-            yt=_axis(file, "traction", -2),
+            xt=_axis(file, "lattice_x"),
+            yt=_axis(file, "lattice_y"),
             traction=_take(file, "traction", frame, 3),
             predicted=_take(file, "traction_displacement", frame, 3),
             labels=None if labels is None else labels.astype(np.int32),
-            xi=_axis(file, "relaxed_image", -1),
-            yi=_axis(file, "relaxed_image", -2),
+            xi=_axis(file, "image_x"),
+            yi=_axis(file, "image_y"),
             relaxed=_take(file, "relaxed_image", frame, 2),
             stressed=_take(file, "stressed_image", frame, 2),
             residual=_take(file, "residual_image", frame, 2),

@@ -80,24 +80,20 @@ def _gel(gel: Row) -> list[tuple[str, str]]:
 def _measurement(field: FieldResult, frame: int) -> list[tuple[str, str]]:
     row = next(iter(rows_of_frame(field.frames, frame)), field.frames[0] if field.frames else {})
     found = [(words, f"{plain(number(row, key))} {unit}".strip()) for words, key, unit in _FRAME]
-    seconds = field.record.get("seconds")
-    if isinstance(seconds, int | float):
-        found.append(("time taken", f"{seconds:.1f} s"))
-    for key in ("settings", "versions"):
-        values = field.record.get(key)
+    record = field.record
+    for name, value in (record.get("quality") or {}).items():
+        found.append((str(name).replace("_", " "), plain(value) if isinstance(value, int | float) else str(value)))
+    seconds = record.get("seconds")
+    if isinstance(seconds, Mapping) and isinstance(seconds.get("all"), int | float):
+        found.append(("time taken", f"{seconds['all']:.1f} s"))
+    parts = record.get("parts") or {}
+    for words, values in (("setting", parts.get("settings")), ("version", record.get("versions"))):
         if isinstance(values, Mapping):
-            found += [(f"{key}: {k}", str(v)) for k, v in values.items() if not isinstance(v, Mapping | list)]
-    for key, value in _hashes(field.record):
-        found.append((key, value))
+            found += [(f"{words}: {k}", str(v)) for k, v in values.items() if not isinstance(v, Mapping | list)]
+    files = record.get("files") or {}
+    for role, digest in (parts.get("inputs") or {}).items():
+        found.append((f"{role}: {files.get(role, '')}", f"SHA-256 {digest}"))
     return found
-
-
-def _hashes(record: Mapping[str, Any]) -> list[tuple[str, str]]:
-    for key in ("inputs", "hashes"):
-        values = record.get(key)
-        if isinstance(values, Mapping):
-            return [(f"{name}, SHA-256", str(v)) for name, v in values.items() if isinstance(v, str)]
-    return []
 
 
 def field_context(field: FieldResult, pictures: Pictures, meanings: Mapping[str, Any]) -> dict[str, Any]:
@@ -113,7 +109,7 @@ def field_context(field: FieldResult, pictures: Pictures, meanings: Mapping[str,
             + [with_error(number(r, key), number(r, sd) if sd else None) for _, key, sd in _CELL]
             + [r.get("notes", "")]
         )
-    shares = budget_shares(field.record)
+    shares = budget_shares(field.record, pictures.frame)
     sources = list(dict.fromkeys(k for parts in shares.values() for k in parts))
     links = rows_of_frame(field.pairs, pictures.frame)
     return {

@@ -39,11 +39,11 @@ def _smaller(match: re.Match[str]) -> str:
     if picture.getcolors(256) is None:
         return match.group(0)
     best = raw
-    if picture.mode == "RGBA" and picture.getextrema()[3] == (255, 255):
+    if picture.mode == "RGBA" and picture.getchannel("A").getextrema() == (255, 255):
         picture = picture.convert("RGB")
     if picture.mode == "RGB":
         buffer = io.BytesIO()
-        picture.quantize(256, dither=Image.Dither.NONE).save(buffer, "PNG", optimize=True)
+        picture.quantize(256, dither=Image.Dither.NONE).save(buffer, "PNG")
         best = min(raw, buffer.getvalue(), key=len)
     return "data:image/png;base64," + base64.b64encode(best).decode()
 

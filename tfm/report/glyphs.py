@@ -40,6 +40,23 @@ def _tip_regions(dipole: Array, covariance: Array, scale: float) -> list[Array]:
     return regions
 
 
+def _draw_half(ax: Axes, centre: Array, tip: Array, *, inwards: bool, colours: tuple[str, str]) -> list[Artist]:
+    """One half of a principal axis from the centre to its tip (um), with a head that points in or out."""
+    drawn: list[Artist] = []
+    for width, shade in ((3.4, colours[1]), (1.7, colours[0])):
+        line = ax.plot(
+            [centre[0], tip[0]], [centre[1], tip[1]], color=shade, lw=width, solid_capstyle="butt", zorder=5.5
+        )
+        drawn += line
+    if float(np.hypot(*(tip - centre))) > 0:
+        start, end = (tip, tip + 0.45 * (centre - tip)) if inwards else (centre, tip)
+        style = {"arrowstyle": "-|>", "facecolor": colours[0], "edgecolor": colours[1], "lw": 0.6}
+        style |= {"mutation_scale": 10, "shrinkA": 0, "shrinkB": 0}
+        points = [(float(p[0]), float(p[1])) for p in (end, start)]
+        drawn.append(ax.annotate("", xy=points[0], xytext=points[1], zorder=6, arrowprops=style))
+    return drawn
+
+
 def draw_dipole(
     ax: Axes,
     centroid: ArrayLike,
@@ -84,37 +101,6 @@ def draw_dipole(
     for value, direction in zip(values, vectors, strict=True):
         reach = abs(value) * scale * UM * direction
         for sign in (1, -1):
-            tip = centre + sign * reach
-            start, end = (tip, centre) if value < 0 else (centre, tip)
-            for width, shade in ((3.4, back), (1.7, colour)):
-                drawn.append(
-                    ax.plot(
-                        [centre[0], tip[0]],
-                        [centre[1], tip[1]],
-                        color=shade,
-                        lw=width,
-                        solid_capstyle="butt",
-                        zorder=5.5,
-                    )[0]
-                )
-            if float(np.hypot(*reach)) > 0:
-                middle = start + (end - start) * (0.45 if value < 0 else 1.0)
-                drawn.append(
-                    ax.annotate(
-                        "",
-                        xy=middle,
-                        xytext=start,
-                        zorder=6,
-                        arrowprops={
-                            "arrowstyle": "-|>",
-                            "facecolor": colour,
-                            "edgecolor": back,
-                            "lw": 0.6,
-                            "mutation_scale": 10,
-                            "shrinkA": 0,
-                            "shrinkB": 0,
-                        },
-                    )
-                )
+            drawn += _draw_half(ax, centre, centre + sign * reach, inwards=value < 0, colours=(colour, back))
     drawn.append(ax.plot(*centre, marker="o", ms=3.2, color=colour, mec=back, mew=0.8, zorder=7)[0])
     return drawn

@@ -10,8 +10,9 @@ import numpy as np
 from scipy import stats
 
 from tfm.report.results import FieldResult, number
+from tfm.report.words import plain
 
-__all__ = ["CellValue", "Difference", "Group", "differences", "groups_of", "verdict_sentence"]
+__all__ = ["CellValue", "Difference", "Group", "differences", "group_label", "groups_of", "verdict_sentence"]
 
 
 @dataclass(frozen=True)
@@ -69,12 +70,17 @@ def _cells(field: FieldResult) -> list[CellValue]:
     return found
 
 
+def group_label(field: FieldResult) -> str:
+    """Condition under which a field's cells are shown; changes against a quietest frame are kept apart from totals."""
+    label = field.condition or "no condition given"
+    return f"{label} (change)" if field.change_only else label
+
+
 def groups_of(fields: Sequence[FieldResult]) -> list[Group]:
     """Groups in the order in which their condition first appears; changes (``quietest``) are kept apart from totals."""
     gathered: dict[str, list[CellValue]] = {}
     for field in fields:
-        label = field.condition or "no condition given"
-        gathered.setdefault(f"{label} (change)" if field.change_only else label, []).extend(_cells(field))
+        gathered.setdefault(group_label(field), []).extend(_cells(field))
     groups = []
     for label, cells in gathered.items():
         if not cells:
@@ -125,7 +131,7 @@ def verdict_sentence(groups: Sequence[Group], found: Sequence[Difference]) -> st
     word = "significant" if d.significant else "not significant"
     p = f"{d.p:.2g}" if d.p >= 1e-4 else "< 0.0001"
     return (
-        f"{d.more.condition} pulls harder than {d.less.condition}: {d.value:.2g} pN m more "
-        f"(95 %: {d.low:.2g} to {d.high:.2g}), {word} (p {'= ' if d.p >= 1e-4 else ''}{p}; "
+        f"{d.more.condition} pulls harder than {d.less.condition}: {plain(d.value, 2)} pN m more "
+        f"(95 %: {plain(d.low, 2)} to {plain(d.high, 2)}), {word} (p {'= ' if d.p >= 1e-4 else ''}{p}; "
         f"{len(d.more.cells)} and {len(d.less.cells)} cells)."
     )

@@ -9,6 +9,7 @@ import numpy as np
 from contourpy import contour_generator
 from matplotlib.artist import Artist
 from matplotlib.axes import Axes
+from matplotlib.patches import Rectangle
 from matplotlib.patheffects import withStroke
 from mpl_toolkits.axes_grid1.anchored_artists import AnchoredSizeBar
 from numpy.typing import ArrayLike, NDArray
@@ -92,8 +93,9 @@ def draw_axes_sign(ax: Axes, *, colour: str = "#ffffff") -> list[Artist]:
     """The frame, drawn in the upper left corner: x to the right, y down."""
     back = "#000000" if colour == "#ffffff" else PAPER
     style = {"arrowstyle": "<|-", "color": colour, "lw": 1.1, "mutation_scale": 7, "shrinkA": 0, "shrinkB": 0}
-    drawn: list[Artist] = []
-    for tip, text, shift in (((28, 0), "x", (5, 0)), ((0, -28), "y", (0, -6))):
+    backing = Rectangle((0.015, 0.835), 0.15, 0.15, transform=ax.transAxes, facecolor=back, alpha=0.6, lw=0, zorder=8)
+    drawn: list[Artist] = [ax.add_patch(backing)]
+    for tip, text, shift in (((24, 0), "x", (6, 0)), ((0, -24), "y", (0, -7))):
         drawn.append(
             ax.annotate(
                 "",
@@ -131,7 +133,8 @@ def draw_outlines(ax: Axes, x: ArrayLike, y: ArrayLike, labels: ArrayLike, *, na
     drawn: list[Artist] = []
     for cell in np.unique(number[number > 0]):
         here = number == cell
-        for line in contour_generator(gx, gy, np.pad(here.astype(float), 1)).lines(0.5):
+        lines: Any = contour_generator(gx, gy, np.pad(here.astype(float), 1)).lines(0.5)
+        for line in lines:
             for colour, width in (("#000000", 2.4), ("#ffffff", 1.0)):
                 drawn += ax.plot(line[:, 0], line[:, 1], color=colour, lw=width, zorder=4)
         if names:

@@ -35,18 +35,17 @@ BUDGET_WORDS = {
 _LINES = ("-", "--", ":", "-.")
 
 
-def budget_shares(record: Mapping[str, Any]) -> dict[str, dict[str, float]]:
-    """Cell -> share of the contractile moment's variance by source, from the field's record; empty when it says nothing."""
-    budget = record.get("budget")
-    if not isinstance(budget, Mapping):
-        return {}
+def budget_shares(record: Mapping[str, Any], frame: int) -> dict[str, dict[str, float]]:
+    """Cell -> share of the contractile moment's variance by source, in one frame; empty when the record says nothing."""
     shares: dict[str, dict[str, float]] = {}
-    for cell, parts in budget.items():
-        if isinstance(parts, Mapping):
-            known = {k: float(v) for k, v in parts.items() if isinstance(v, int | float) and v >= 0}
-            total = sum(known.values())
-            if total > 0:
-                shares[str(cell)] = {k: v / total for k, v in known.items()}
+    for entry in record.get("budget") or ():
+        parts = entry.get("variance_pNm2")
+        if entry.get("frame", 0) != frame or not isinstance(parts, Mapping):
+            continue
+        known = {str(k): float(v) for k, v in parts.items() if isinstance(v, int | float) and v >= 0}
+        total = sum(known.values())
+        if total > 0:
+            shares[str(entry.get("cell"))] = {k: v / total for k, v in known.items()}
     return shares
 
 
@@ -86,7 +85,7 @@ def draw_budget(ax: Axes, shares: Mapping[str, Mapping[str, float]]) -> None:
     ax.set_xlabel("share of the variance, %")
     ax.legend(
         loc="upper center",
-        bbox_to_anchor=(0.5, -0.27),
+        bbox_to_anchor=(0.5, -0.2),
         ncols=3,
         fontsize=7.5,
         frameon=False,
@@ -204,7 +203,7 @@ def draw_links(ax: Axes, field: FieldResult, frame: int) -> None:
 def numbers_figure(field: FieldResult, frame: int) -> Figure | None:
     """All of the above that the folder has numbers for, in one row."""
     jobs: list[Callable[[Axes], None]] = []
-    shares = budget_shares(field.record)
+    shares = budget_shares(field.record, frame)
     gel, curve = field.gel, field.record.get("poisson_evidence")
     if len({r.get("frame") for r in field.cells}) > 1:
         jobs.append(lambda ax: draw_traces(ax, field))
@@ -216,8 +215,8 @@ def numbers_figure(field: FieldResult, frame: int) -> Figure | None:
         jobs.append(lambda ax: draw_evidence(ax, gel, curve if isinstance(curve, Mapping) else None))
     if not jobs:
         return None
-    wide, high = 3.9, 3.1
+    wide, high = 3.9, 3.2
     figure = new_figure(wide * len(jobs), high)
     for i, job in enumerate(jobs):
-        job(figure.add_axes(((i + 0.14) / len(jobs), 0.27, 0.80 / len(jobs), 0.62)))
+        job(figure.add_axes(((i + 0.14) / len(jobs), 0.3, 0.80 / len(jobs), 0.6)))
     return figure

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Sequence
 
 import numpy as np
@@ -46,15 +47,24 @@ def draw_moments(ax: Axes, groups: Sequence[Group], *, links: bool = False) -> N
                 )
                 if links:
                     drawn.set_urls([f"figures/{cells[i].field.folder}/index.html" for i in chosen])
-        words = group.condition if len(group.condition) <= 24 else group.condition[:23] + "…"
-        ax.text(-0.02, band - 0.08, words, transform=ax.get_yaxis_transform(), ha="right", va="center", weight="bold")
+        words = "\n".join(textwrap.wrap(group.condition, 17, max_lines=2, placeholder="…")) or "—"
         ax.text(
             -0.02,
-            band + 0.2,
+            band - 0.02,
+            words,
+            transform=ax.get_yaxis_transform(),
+            ha="right",
+            va="bottom",
+            weight="bold",
+            linespacing=1.0,
+        )
+        ax.text(
+            -0.02,
+            band + 0.06,
             f"{len(cells)} cell{'s' if len(cells) != 1 else ''}",
             transform=ax.get_yaxis_transform(),
             ha="right",
-            va="center",
+            va="top",
             color=QUIET,
             fontsize=8,
         )
@@ -72,7 +82,7 @@ def moments_figure(groups: Sequence[Group], *, links: bool = False) -> Figure | 
     """:func:`draw_moments` at the size of the first screen; None when no cell was measured."""
     if not groups:
         return None
-    band = 0.82 if len(groups) <= 4 else 0.55
+    band = 0.75 if len(groups) <= 3 else 0.62 if len(groups) <= 5 else 0.5
     high = 0.55 + band * len(groups)
     figure = new_figure(5.6, high)
     draw_moments(figure.add_axes((0.27, 0.48 / high, 0.71, (high - 0.55) / high)), groups, links=links)

@@ -6,6 +6,7 @@ import hashlib
 import re
 from collections.abc import Mapping, Sequence
 from pathlib import Path
+from statistics import median
 from typing import Any
 
 from jinja2 import Environment, PackageLoader, StrictUndefined
@@ -14,7 +15,7 @@ from markupsafe import Markup
 from tfm.report.drawing import Pictures, draw_field
 from tfm.report.fieldpage import field_context
 from tfm.report.files import svg_text, write_bytes
-from tfm.report.groups import Group, differences, groups_of, verdict_sentence
+from tfm.report.groups import Group, differences, group_label, groups_of, verdict_sentence
 from tfm.report.overview import moments_figure
 from tfm.report.results import FieldResult, Results, number, read_results
 from tfm.report.style import MARKS, drawing
@@ -123,6 +124,7 @@ def _index(results: Results, drawn: Mapping[str, Pictures], environment: Environ
         verdict=verdict_sentence(groups, found),
         comparisons=found,
         moments_alt=_moments_alt(groups),
+        groups=[_group_line(g, results.fields) for g in groups],
         conditions=list(dict.fromkeys(f.condition for f in results.fields if f.condition)),
         numeric=_NUMERIC,
         columns=_COLUMNS,
@@ -164,26 +166,41 @@ def _moments_alt(groups: Sequence[Group]) -> str:
     return "Contractile moment of every cell by condition. " + " ".join(parts)
 
 
+def _group_line(group: Group, fields: Sequence[FieldResult]) -> dict[str, Any]:
+    """One line of the table of conditions: its fields by status, its cells, their mean and how well each is known."""
+    mine = [f for f in fields if group_label(f) == group.condition]
+    errors = [100 * c.sd / abs(c.value) for c in group.cells if c.sd is not None and c.value]
+    interval = f" ({plain(group.low)} to {plain(group.high)})" if group.low is not None else ""
+    count = {s: sum(f.status == s for f in mine) for s in ("ok", "caution", "failed")}
+    error = f"{median(errors):.2g} %" if errors else "—"
+    return {
+        "name": group.condition,
+        **count,
+        "cells": len(group.cells),
+        "mean": plain(group.mean) + interval,
+        "error": error,
+    }
+
+
 def _state_sentence(results: Results, drawn: Mapping[str, Pictures], excluded: int) -> str:
+    """How much there is, and how much of it was proven to be whole; 'all good' only for N of N."""
     total, counts = len(results.fields), results.counts()
-    whole = sum(_verified(f, drawn[f.name]) for f in results.fields)
-    text = f"{counts['ok'] + counts['caution']} of {total} fields gave numbers; the outputs of {whole} of {total} were verified against their hashes."
+    usable = [f for f in results.fields if f.status in ("ok", "caution")]
+    whole = sum(_verified(f, drawn[f.name]) for f in usable)
+    text = f"{len(usable)} of {total} fields gave numbers; {whole} of these {len(usable)} were verified against the hashes of their outputs."
     if total and counts["ok"] == total == whole:
-        text = f"All good: {total} of {total} fields are ok and their outputs were verified against their hashes."
+        text = f"All good: {total} of {total} fields are ok, and their outputs were verified against their hashes."
     if excluded:
         text += f" {excluded} marked 'exclude' {'is' if excluded == 1 else 'are'} left out of the comparison."
     return text
 
 
 def _verified(field: FieldResult, pictures: Pictures) -> bool:
-    """The arrays are the very bytes that the record speaks of; a failed field has a record and no arrays."""
+    """The arrays are the very bytes that the record speaks of."""
     outputs = field.record.get("outputs")
-    if not isinstance(outputs, Mapping):
+    if not isinstance(outputs, Mapping) or not outputs or field.data is None:
         return False
-    return all(
-        field.data is not None and name == field.data.name and digest == pictures.sha256
-        for name, digest in outputs.items()
-    )
+    return dict(outputs) == {field.data.name: pictures.sha256}
 
 
 def _row(field: FieldResult, pictures: Pictures) -> dict[str, Any]:
@@ -255,11 +272,12 @@ def _setting(run: Mapping[str, Any], name: str) -> str:
 
 def _version(run: Mapping[str, Any]) -> str:
     versions = run.get("versions")
-    return str(versions.get("tugtensor", versions.get("tfm", ""))) if isinstance(versions, Mapping) else ""
+    found = versions.get("tugtensor") if isinstance(versions, Mapping) else None
+    return str(found or run.get("tfm", ""))
 
 
 def _provenance(run: Mapping[str, Any]) -> list[tuple[str, str]]:
-    found = []
+    found = [(key, str(run[key])) for key in ("outcome", "seconds", "workers") if run.get(key) is not None]
     for part in ("settings", "versions"):
         if isinstance(run.get(part), Mapping):
             found += [(f"{part}: {k}", str(v)) for k, v in run[part].items() if not isinstance(v, Mapping | list)]

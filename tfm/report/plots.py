@@ -15,9 +15,12 @@ True
 
 from __future__ import annotations
 
+from functools import cache
+
 import numpy as np
+from matplotlib import colormaps
 from matplotlib.axes import Axes
-from matplotlib.colors import TwoSlopeNorm
+from matplotlib.colors import Colormap, ListedColormap, TwoSlopeNorm
 from matplotlib.image import AxesImage
 from matplotlib.quiver import Quiver
 from numpy.typing import ArrayLike, NDArray
@@ -86,12 +89,18 @@ def draw_overlay(ax: Axes, x: ArrayLike, y: ArrayLike, relaxed: ArrayLike, stres
 
 
 def _arrow_scale(x: Array, size: Array, *, across: int) -> tuple[int, float]:
-    """Every how many-th vector to draw, and the m of drawing per unit: the largest spans two and a half gaps."""
+    """Every how many-th vector to draw, and the m of drawing per unit: the largest spans three and a half gaps."""
     step = max(int(np.ceil(len(x) / across)), 1)
     gap = step * float(x[1] - x[0])
     finite = size[np.isfinite(size)]
     peak = float(np.percentile(finite, 99.8)) if finite.size else 0.0
-    return step, (2.5 * gap / peak if peak > 0 else 1.0)
+    return step, (3.5 * gap / peak if peak > 0 else 1.0)
+
+
+@cache
+def _on_black() -> Colormap:
+    """The upper part of the map of sizes: its dark end would vanish on dark ground."""
+    return ListedColormap(colormaps[SIZE_MAP](np.linspace(0.3, 1.0, 256)), name="size on black")
 
 
 def draw_displacement(
@@ -100,7 +109,7 @@ def draw_displacement(
     y: ArrayLike,
     u: ArrayLike,
     *,
-    arrows: int = 28,
+    arrows: int = 24,
     noise: float | None = None,
     key: bool = True,
 ) -> Quiver:
@@ -115,7 +124,7 @@ def draw_displacement(
     arrows
         At most so many arrows across: every n-th measured vector is drawn, none is averaged.
     noise
-        m; vectors below twice this are drawn pale, because they are not distinguishable from noise.
+        m; vectors below twice this are drawn as dots, because their direction is noise.
     key
         Draw the arrow key.
 
@@ -130,26 +139,27 @@ def draw_displacement(
     part = (slice(step // 2, None, step), slice(step // 2, None, step))
     gx, gy = np.meshgrid(xs[part[1]], ys[part[0]])
     kept = np.isfinite(size[part])
-    length = size[part][kept]
-    faint = np.zeros(length.shape, bool) if noise is None else length < 2 * noise
+    still = kept & (size[part] < (0.0 if noise is None else 2 * noise))
+    if still.any():
+        ax.plot(gx[still] * UM, gy[still] * UM, ls="", marker=".", ms=1.6, color="#9fb0c4", zorder=2.5)
+    kept &= ~still
     vmax = float(np.nanpercentile(size, 99.8)) * UM if np.isfinite(size).any() else 1.0
     drawn = ax.quiver(
         gx[kept] * UM,
         gy[kept] * UM,
         field[0][part][kept] * scale * UM,
         field[1][part][kept] * scale * UM,
-        length * UM,
+        size[part][kept] * UM,
         angles="xy",
         scale_units="xy",
         scale=1.0,
-        cmap=SIZE_MAP,
-        width=0.0045,
-        headwidth=4,
-        headlength=4,
-        headaxislength=3.6,
+        cmap=_on_black(),
+        width=0.0055,
+        headwidth=3.6,
+        headlength=3.8,
+        headaxislength=3.4,
         minlength=0.6,
         zorder=3,
-        alpha=np.where(faint, 0.55, 1.0) if faint.any() else None,
     )
     drawn.set_clim(0, max(vmax, 1e-6))
     if key and vmax > 0:
@@ -165,7 +175,7 @@ def draw_traction(
     traction: ArrayLike,
     labels: ArrayLike | None = None,
     *,
-    arrows: int = 34,
+    arrows: int = 30,
     key: bool = True,
 ) -> AxesImage:
     """Size of the traction as colour, its direction as arrows, the outlines on top; ground without traction stays blank.

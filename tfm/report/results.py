@@ -78,7 +78,8 @@ class FieldResult:
     @property
     def change_only(self) -> bool:
         """True when the numbers are changes against the quietest frame and not totals."""
-        return (self.sheet or {}).get("relaxed", "").strip().lower() == "quietest"
+        typed = {k.strip().lower(): v for k, v in (self.sheet or {}).items()}
+        return typed.get("relaxed", "").strip().lower() == "quietest"
 
 
 @dataclass(frozen=True)
@@ -156,14 +157,29 @@ def _read_json(path: Path) -> dict[str, Any]:
     return found if isinstance(found, dict) else {}
 
 
-def _records(folder: Path) -> dict[str, tuple[dict[str, Any], Path | None]]:
-    """Field name -> its record and its netCDF file. The record says the name; the file's stem is only a safe form of it."""
+def _records(root: Path, run: Mapping[str, Any]) -> dict[str, tuple[dict[str, Any], Path | None]]:
+    """Field name -> its record and its netCDF file.
+
+    run.json says which record is current; without it, the records themselves say whose they are (their file name is
+    only a safe form of the field's name).
+    """
+    listed = {str(e["field"]): str(e.get("record", "")) for e in _entries(run)}
+    if listed:
+        paths = [root / path for path in listed.values() if path]
+    else:
+        paths = sorted((root / "fields").glob("*.json"))
     found: dict[str, tuple[dict[str, Any], Path | None]] = {}
-    for path in sorted(folder.glob("*.json")):
+    for path in paths:
         record = _read_json(path)
         data = path.with_suffix(".nc")
         found[str(record.get("field", path.stem))] = (record, data if data.exists() else None)
     return found
+
+
+def _entries(run: Mapping[str, Any]) -> list[Mapping[str, Any]]:
+    """run.json's entries, one per row of the sheet."""
+    listed = run.get("fields")
+    return [e for e in listed if isinstance(e, Mapping) and "field" in e] if isinstance(listed, list) else []
 
 
 def _meanings(columns: Mapping[str, Any]) -> dict[str, Mapping[str, Any]]:
@@ -208,29 +224,30 @@ def read_results(root: Path) -> Results:
         When fields.csv or cells.csv is missing, or a JSON file is cut.
     """
     root = Path(root)
-    frames = _read_table(root / "fields.csv", needed=True)
-    cells = _read_table(root / "cells.csv", needed=True)
-    pairs, gels = (_read_table(root / n, needed=False) for n in ("pairs.csv", "gel.csv"))
+    tables = [
+        _read_table(root / f"{n}.csv", needed=n in ("fields", "cells")) for n in ("fields", "cells", "pairs", "gel")
+    ]
     run = _read_json(root / "run.json")
-    records = _records(root / "fields")
-    sheet = _sheet_rows(run, records)
-    names = list(dict.fromkeys([*sheet, *(r["field"] for r in frames)]))
+    entries = {str(e["field"]): e for e in _entries(run)}
+    records, sheet = _records(root, run), _sheet_rows(run)
+    by_field = [_by_field(table) for table in tables]
+    names = list(dict.fromkeys([*entries, *(r.get("field", "") for r in tables[0])]))
     fields = []
     for position, name in enumerate(names):
-        mine = [[r for r in table if r.get("field") == name] for table in (frames, cells, pairs, gels)]
+        frames, cells, pairs, gels = (table.get(name, ()) for table in by_field)
         record, data = records.get(name, ({}, None))
-        own = [r for r in mine[1] if r.get("status")]
+        status, message = _outcome(entries.get(name), frames, cells)
         fields.append(
             FieldResult(
                 name=name,
                 position=position,
                 folder=folder_name(name),
-                status=_worst([r.get("status", "") for r in mine[0]] + [r["status"] for r in own]),
-                message=_sentences(mine[0], mine[1]),
-                frames=tuple(mine[0]),
-                cells=tuple(mine[1]),
-                pairs=tuple(mine[2]),
-                gel=mine[3][0] if mine[3] else None,
+                status=status,
+                message=message,
+                frames=frames,
+                cells=cells,
+                pairs=pairs,
+                gel=gels[0] if gels else None,
                 record=record,
                 data=data,
                 sheet=sheet.get(name),
@@ -243,14 +260,33 @@ def read_results(root: Path) -> Results:
     return Results(root, tuple(fields), _meanings(_read_json(root / "columns.json")), run, decisions)
 
 
-def _sheet_rows(run: Mapping[str, Any], records: Mapping[str, tuple[dict[str, Any], Path | None]]) -> dict[str, Row]:
-    """The sheet's rows in its order, from run.json or, failing that, from the fields' records."""
+def _by_field(table: Sequence[Row]) -> dict[str, tuple[Row, ...]]:
+    found: dict[str, list[Row]] = {}
+    for row in table:
+        found.setdefault(row.get("field", ""), []).append(row)
+    return {name: tuple(rows) for name, rows in found.items()}
+
+
+def _outcome(entry: Mapping[str, Any] | None, frames: Sequence[Row], cells: Sequence[Row]) -> tuple[str, str]:
+    """Status and message: what the run said of the field; without run.json, what its rows say."""
+    said = _sentences(frames, cells)
+    if entry is None:
+        return _worst([r.get("status", "") for r in (*frames, *cells)]), said
+    status = str(entry.get("status", ""))
+    if not entry.get("finished", True) or status not in STATUSES:
+        status = "unfinished"
+    return status, str(entry.get("message") or said)
+
+
+def _sheet_rows(run: Mapping[str, Any]) -> dict[str, Row]:
+    """Field name -> its row of the sheet as typed. Rows stand in the order of run.json's entries."""
     listed = run.get("sheet_rows")
-    if isinstance(listed, list):
-        return {
-            str(r["field"]): {k: str(v) for k, v in r.items()}
-            for r in listed
-            if isinstance(r, Mapping) and "field" in r
-        }
-    own = {name: record["sheet"] for name, (record, _) in records.items() if isinstance(record.get("sheet"), Mapping)}
-    return {name: {k: str(v) for k, v in row.items()} for name, row in own.items()}
+    rows = (
+        [{str(k): str(v) for k, v in r.items()} for r in listed if isinstance(r, Mapping)]
+        if isinstance(listed, list)
+        else []
+    )
+    entries = _entries(run)
+    if len(entries) == len(rows):
+        return {str(e["field"]): row for e, row in zip(entries, rows, strict=True)}
+    return {row["field"]: row for row in rows if "field" in row}

@@ -12,7 +12,19 @@ import matplotlib as mpl
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
-__all__ = ["GROUND", "INK", "LINE", "MARKS", "PAPER", "QUIET", "SIGN_MAP", "SIZE_MAP", "TRACTION_MAP", "drawing", "new_figure"]
+__all__ = [
+    "GROUND",
+    "INK",
+    "LINE",
+    "MARKS",
+    "PAPER",
+    "QUIET",
+    "SIGN_MAP",
+    "SIZE_MAP",
+    "TRACTION_MAP",
+    "drawing",
+    "new_figure",
+]
 
 PAPER: Final = "#fcfbf7"
 INK: Final = "#17202b"

@@ -14,13 +14,15 @@ def plain(value: float | None, digits: int = 3) -> str:
 
     Examples
     --------
-    >>> plain(1234.5), plain(0.012345), plain(None), plain(-0.0)
-    ('1230', '0.0123', '—', '0')
+    >>> plain(1234.5), plain(0.012345), plain(None), plain(-0.0), plain(2209.0)
+    ('1230', '0.0123', '—', '0', '2209')
     """
     if value is None:
         return "—"
     if value == 0:
         return "0"
+    if float(value).is_integer() and abs(value) < 1e6:
+        return f"{value:.0f}"  # counts, and values typed as whole numbers
     places = digits - 1 - math.floor(math.log10(abs(value)))
     if abs(value) < 1e-4 or abs(value) >= 1e6:
         return f"{value:.{digits - 1}e}"
