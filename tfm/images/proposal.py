@@ -28,7 +28,8 @@ _fill_polygon: Any = draw.polygon  # the library declares no types
 
 Field = NDArray[np.float64]
 
-#: Standard deviations above which a spot is no noise: among 10^4 grid points, noise reaches 5 once in 30 fields.
+#: Standard deviations above which a spot is no noise: exp(-5^2 / 2) of 10^4 grid points is once in 30 fields, and three
+#: neighbours must agree.
 _ABOVE_NOISE = 5.0
 #: Part of the peak below which a spot is taken for the blur of a stronger one.
 _OF_PEAK = 0.15
@@ -93,16 +94,17 @@ def propose_outline(
     filled = np.stack([_fill_gaps(component, valid) for component in u])
     overlap = 1.0 if independent_area is None else max(1.0, independent_area / spacing**2)
     pull, width, sd = _local_pull(filled, noise if math.isfinite(noise) else 0.0, overlap)
-    size = np.hypot(*pull)
+    size = np.hypot(*pull) / _border_gain(width, valid.shape)
     core = size > max(_ABOVE_NOISE * sd, _OF_PEAK * float(size.max()))
     core &= ndimage.binary_dilation(valid, iterations=2)
     spots = _spots(core, pull, size)
     if not spots:
         raise _nothing()
-    hulls = _separate_hulls(_join_unbalanced(spots), x, y, pixel_size, spacing)
+    groups = _join_unbalanced(spots)
+    hulls = _separate_hulls(groups, x, y, pixel_size, spacing)
     labels = _draw(hulls, shape, margin=(1.0 + width) * spacing / pixel_size)
     notes = [_NOTE]
-    if any(spot.unbalanced for spot in spots) and len(hulls) == 1 and len(spots) == 1:
+    if any(group.unbalanced for group in groups):
         notes.append("the displacement shows one-sided pull: a part of the cell may lie outside the image")
     return Outlines(labels, "proposed from displacement", tuple(notes))
 
@@ -149,7 +151,7 @@ def _local_pull(u: Field, noise: float, overlap: float) -> tuple[Field, float, f
     """|k| u at the finest smoothing whose peak is clear of noise: ``(2, ny, nx)``, smoothing in grid steps, its sd."""
     for width in (1.0, 1.5, 2.2, 3.2):
         pull, gain = _half_laplacian(u, width)
-        size = np.hypot(*pull)
+        size = np.hypot(*pull) / _border_gain(width, u.shape[1:])
         # Away from the cells only noise is left, and a Rayleigh variable's median is 1.177 sd.
         measured = float(np.median(size)) / 1.1774
         sd = max(noise * gain * math.sqrt(overlap), measured)
@@ -158,6 +160,15 @@ def _local_pull(u: Field, noise: float, overlap: float) -> tuple[Field, float, f
     if float(size.max()) <= _ABOVE_NOISE * sd or not size.max() > 0:
         raise _nothing()
     return pull, width, sd
+
+
+def _border_gain(width: float, shape: tuple[int, ...]) -> Field:
+    """How much more noise there is at the mirrored border (twice the variance) and in its corners (four times)."""
+    gains = []
+    for length in shape:
+        from_border = np.minimum(np.arange(length), np.arange(length)[::-1])
+        gains.append(1.0 + (math.sqrt(2.0) - 1.0) * np.exp(-((from_border / width) ** 2)))
+    return np.outer(gains[0], gains[1])
 
 
 def _half_laplacian(u: Field, width: float) -> tuple[Field, float]:
