@@ -1,4 +1,4 @@
-"""Figures that let a reader distrust a field: the beads on top of each other, and what the traction does not explain."""
+"""Figures that let a reader distrust a field: beads on top of each other, and what the traction does not explain."""
 
 from __future__ import annotations
 
@@ -30,7 +30,7 @@ def _window(axis: Array, centre: float, half: int) -> slice:
 
 
 def _quiet_and_busy(a: FieldArrays) -> list[tuple[float, float]]:
-    """Positions (x, y) in m where the gel moved least and most, away from the border; the middle if nothing is known."""
+    """Positions (x, y) in m where the gel moved least and most, off the border; the middle if nothing is known."""
     if a.u is None or a.x is None or a.y is None or a.xi is None or a.yi is None:
         xs, ys = (a.xi, a.yi) if a.xi is not None and a.yi is not None else (np.zeros(1), np.zeros(1))
         return [(float(xs.mean()), float(ys.mean()))] * 2

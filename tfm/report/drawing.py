@@ -76,63 +76,68 @@ def _state(field: FieldResult, digest: str) -> str:
     return hashlib.sha256(json.dumps(about, sort_keys=True, default=str).encode()).hexdigest()
 
 
+_CAPTIONS = {
+    "maps": (
+        "What moved, what pulled, where the moment is made",
+        "Arrows are measured vectors (not every one), coloured by size and drawn to the scale of the bar in the lower "
+        "left corner; dots are vectors below twice their noise. In the right map purple pulls towards the cell's centroid "
+        "and orange pushes away. Bars with arrow heads are the principal axes: heads point inwards along an axis that "
+        "contracts, and the shaded tips are 95 % regions of angle and size.",
+    ),
+    "beads": (
+        "Relaxed and stressed beads on top of each other",
+        "Orange: relaxed. Blue: stressed. White: both agree. Left and middle: the quietest ground before and after the "
+        "drift is taken out; if the middle is not white, distrust this field. Right: the ground that moved most.",
+    ),
+    "residual": (
+        "What the traction does not explain",
+        "Observed minus predicted. A good field is even noise without structure. Structure outside the outline means a "
+        "wrong gel or a cell that is not outlined; inside, traction finer than the lattice, or lost focus.",
+    ),
+    "numbers": (
+        "Numbers behind the picture",
+        "As far as this field has them: moment over time with its 95 % band, interaction energies of pairs, the error "
+        "budget, and what the beads say about the Poisson ratio.",
+    ),
+}
+
+
 def _alt_numbers(field: FieldResult, frame: int) -> str:
-    parts = []
-    for row in rows_of_frame(field.pairs, frame)[:6]:
-        parts.append(
-            f"Cells {row['cell_a']} and {row['cell_b']}: interaction energy {plain(number(row, 'energy_fJ'))} fJ."
-        )
+    parts = [
+        f"Cells {r['cell_a']} and {r['cell_b']}: interaction energy {plain(number(r, 'energy_fJ'))} fJ."
+        for r in rows_of_frame(field.pairs, frame)[:6]
+    ]
     gel = field.gel
     if gel is not None and number(gel, "poisson_best") is not None:
+        best, low, high, entered = (plain(number(gel, f"poisson{k}")) for k in ("_best", "_low", "_high", ""))
         parts.append(
-            f"Poisson ratio from the beads {plain(number(gel, 'poisson_best'))}, 95 % interval {plain(number(gel, 'poisson_low'))} "
-            f"to {plain(number(gel, 'poisson_high'))}, entered {plain(number(gel, 'poisson'))}: {gel.get('verdict')}."
+            f"Poisson ratio from the beads {best}, 95 % interval {low} to {high}; "
+            f"entered {entered}: {gel.get('verdict')}."
         )
     parts += [cell_sentence(r, change=field.change_only) for r in rows_of_frame(field.cells, frame)]
     return " ".join(parts)
 
 
-def _kinds(field: FieldResult, frame: int) -> list[tuple[str, Callable[[FieldArrays], Figure | None], str, str, str]]:
-    """Name, drawing, title, caption and alt text of every figure of a field."""
-    rows = rows_of_frame(field.cells, frame)
-    shift = next(iter(rows_of_frame(field.frames, frame)), {})
-    drift = f"Drift {plain(number(shift, 'drift_x_px'))} px in x and {plain(number(shift, 'drift_y_px'))} px in y."
-    misfit = f"Misfit {plain(number(shift, 'misfit'))}, 1 is expected."
-    return [
-        (
-            "maps",
-            lambda a: maps_figure(field, a),
-            "What moved, what pulled, where the moment is made",
-            "Arrows are measured vectors (not every one), coloured by size and drawn to the scale of the bar in the lower left corner; in the "
-            "right map purple pulls towards the cell's centroid and orange pushes away. Bars with arrow heads are the principal axes: heads point "
-            "inwards along an axis that contracts; the shaded tips are 95 % regions of angle and size.",
-            alt_maps(field, rows),
-        ),
-        (
-            "beads",
-            lambda a: beads_figure(field, a),
-            "Relaxed and stressed beads on top of each other",
-            "Orange: relaxed. Blue: stressed. White: both agree. Left and middle: the quietest ground before and after the drift is taken out; if "
-            "the middle is not white, distrust this field. Right: the ground that moved most.",
-            f"Relaxed beads in orange over stressed beads in blue, before and after drift, and where the gel moved most. {drift}",
-        ),
-        (
-            "residual",
-            lambda a: residual_figure(field, a),
-            "What the traction does not explain",
-            "Observed minus predicted. A good field is even noise without structure; structure outside the outline means a wrong gel or a cell "
-            "that is not outlined, structure inside means traction finer than the lattice or lost focus.",
-            f"Maps of observed minus predicted displacement, x and y component. {misfit}",
-        ),
-        (
-            "numbers",
-            lambda a: numbers_figure(field, a.frame),
-            "Numbers behind the picture",
-            "As far as this field has them: moment over time with its 95 % band, interaction energies of pairs, the error budget, and what the "
-            "beads say about the Poisson ratio.",
-            _alt_numbers(field, frame),
-        ),
-    ]
+def _alt(name: str, field: FieldResult, frame: int) -> str:
+    """Alt text of a figure, with its numbers."""
+    row = next(iter(rows_of_frame(field.frames, frame)), {})
+    if name == "maps":
+        return alt_maps(field, rows_of_frame(field.cells, frame))
+    if name == "beads":
+        drift = f"{plain(number(row, 'drift_x_px'))} px in x and {plain(number(row, 'drift_y_px'))} px in y"
+        return f"Relaxed over stressed beads, before and after a drift of {drift}, and where the gel moved most."
+    if name == "residual":
+        misfit = plain(number(row, "misfit"))
+        return f"Maps of observed minus predicted displacement in x and y. Misfit {misfit}; 1 is expected."
+    return _alt_numbers(field, frame)
+
+
+_FIGURES: dict[str, Callable[[FieldResult, FieldArrays], Figure | None]] = {
+    "maps": maps_figure,
+    "beads": beads_figure,
+    "residual": residual_figure,
+    "numbers": numbers_figure,
+}
 
 
 def draw_field(root: Path, field: FieldResult, *, redo: bool = False) -> Pictures:
@@ -151,13 +156,14 @@ def draw_field(root: Path, field: FieldResult, *, redo: bool = False) -> Picture
     arrays = read_arrays(field.data, frame=frame) if field.data is not None else FieldArrays(frame=frame, frames=1)
     pictures = []
     with drawing():
-        for name, make, title, caption, alt in _kinds(field, frame):
-            figure = make(arrays)
+        for name, make in _FIGURES.items():
+            figure = make(field, arrays)
             if figure is None:
                 continue
+            title, caption = _CAPTIONS[name]
             write_bytes(folder / f"{name}.svg", svg_text(figure, title=f"{field.name}: {title}").encode())
             width, height = (round(v * 100) for v in figure.get_size_inches())
-            pictures.append(Picture(f"{name}.svg", title, caption, alt, width, height))
+            pictures.append(Picture(f"{name}.svg", title, caption, _alt(name, field, frame), width, height))
     small = thumbnail(arrays)
     if small is not None:
         write_bytes(folder / "thumb.webp", small)

@@ -1,4 +1,4 @@
-"""Writing figures to disk: reproducible vector files with small pictures inside, lossy thumbnails, atomic replacement."""
+"""Figures on disk: reproducible vector files with small pictures inside, lossy thumbnails, atomic replacement."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""Conditions side by side: every cell, the group's mean with its interval, and whether a difference is more than chance."""
+"""Conditions side by side: every cell, the group's mean with its interval, and whether a difference is chance."""
 
 from __future__ import annotations
 
@@ -17,7 +17,7 @@ __all__ = ["CellValue", "Difference", "Group", "differences", "group_label", "gr
 
 @dataclass(frozen=True)
 class CellValue:
-    """One cell: its contractile moment in pN m (median over frames), and one standard deviation with the gel's share."""
+    """One cell: contractile moment in pN m (median over frames) and one standard deviation with the gel's share."""
 
     field: FieldResult
     cell: str

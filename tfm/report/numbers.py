@@ -10,6 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
 from tfm.report import plots
+from tfm.report.fielddata import FieldArrays
 from tfm.report.figures import rows_of_frame
 from tfm.report.results import FieldResult, Row, number
 from tfm.report.style import INK, LINE, QUIET, new_figure
@@ -36,7 +37,7 @@ _LINES = ("-", "--", ":", "-.")
 
 
 def budget_shares(record: Mapping[str, Any], frame: int) -> dict[str, dict[str, float]]:
-    """Cell -> share of the contractile moment's variance by source, in one frame; empty when the record says nothing."""
+    """Cell -> share of the contractile moment's variance by source, in one frame; empty when nothing is known."""
     shares: dict[str, dict[str, float]] = {}
     for entry in record.get("budget") or ():
         parts = entry.get("variance_pNm2")
@@ -96,7 +97,7 @@ def draw_budget(ax: Axes, shares: Mapping[str, Mapping[str, float]]) -> None:
 
 
 def draw_evidence(ax: Axes, gel: Row, curve: Mapping[str, Sequence[float]] | None = None) -> None:
-    """Poisson ratio that the beads point to (95 % interval), the entered value, and the evidence curve when there is one."""
+    """Poisson ratio that the beads point to (95 % interval), the entered value, and the evidence curve."""
     entered, best = number(gel, "poisson"), number(gel, "poisson_best")
     low, high = number(gel, "poisson_low"), number(gel, "poisson_high")
     if curve is not None:
@@ -155,7 +156,7 @@ def draw_traces(ax: Axes, field: FieldResult) -> None:
 
 
 def draw_links(ax: Axes, field: FieldResult, frame: int) -> None:
-    """Pairs of cells as links: solid where together they store less energy (W < 0), dashed where more; width by size."""
+    """Pairs of cells as links: solid where together they store less (W < 0), dashed where more; width by size."""
     place = {r["cell"]: (number(r, "x_um"), number(r, "y_um")) for r in rows_of_frame(field.cells, frame)}
     rows = [r for r in rows_of_frame(field.pairs, frame) if r.get("cell_a") in place and r.get("cell_b") in place]
     sizes = [abs(number(r, "energy_fJ") or number(r, "dipole_energy_fJ") or 0.0) for r in rows]
@@ -200,8 +201,9 @@ def draw_links(ax: Axes, field: FieldResult, frame: int) -> None:
     ax.set_title("Interaction energy: solid < 0, dashed > 0")
 
 
-def numbers_figure(field: FieldResult, frame: int) -> Figure | None:
+def numbers_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
     """All of the above that the folder has numbers for, in one row."""
+    frame = a.frame
     jobs: list[Callable[[Axes], None]] = []
     shares = budget_shares(field.record, frame)
     gel, curve = field.gel, field.record.get("poisson_evidence")

@@ -16,10 +16,10 @@ __all__ = ["draw_moments", "moments_figure"]
 
 
 def draw_moments(ax: Axes, groups: Sequence[Group], *, links: bool = False) -> None:
-    """One band per condition: cells sorted by their moment, each with its 95 % interval; behind them the mean and its own.
+    """One band per condition: cells sorted by moment, each with its 95 % interval; behind them the mean and its own.
 
-    A cell whose field is ``ok`` is a filled circle, one that asks for ``caution`` a hollow triangle. ``links`` ties every
-    mark to its field's page (SVG only).
+    A cell whose field is ``ok`` is a filled circle, one that asks for ``caution`` a hollow triangle.
+    ``links`` ties every mark to its field's page (SVG only).
     """
     for band, group in enumerate(groups):
         cells = sorted(group.cells, key=lambda c: c.value)

@@ -6,7 +6,6 @@ import hashlib
 import re
 from collections.abc import Mapping, Sequence
 from pathlib import Path
-from statistics import median
 from typing import Any
 
 from jinja2 import Environment, PackageLoader, StrictUndefined
@@ -15,12 +14,13 @@ from markupsafe import Markup
 from tfm.report.drawing import Pictures, draw_field
 from tfm.report.fieldpage import field_context
 from tfm.report.files import svg_text, write_bytes
-from tfm.report.groups import Group, differences, group_label, groups_of, verdict_sentence
+from tfm.report.groups import Group, differences, groups_of, verdict_sentence
+from tfm.report.lines import field_line, group_line
 from tfm.report.overview import moments_figure
-from tfm.report.results import FieldResult, Results, number, read_results
+from tfm.report.results import FieldResult, Results, read_results
 from tfm.report.style import MARKS, drawing
-from tfm.report.triage import LIMITS, findings, first_look, relative_error
-from tfm.report.words import plain, with_error
+from tfm.report.triage import LIMITS, findings, first_look
+from tfm.report.words import plain
 
 __all__ = ["build_report"]
 
@@ -124,12 +124,12 @@ def _index(results: Results, drawn: Mapping[str, Pictures], environment: Environ
         verdict=verdict_sentence(groups, found),
         comparisons=found,
         moments_alt=_moments_alt(groups),
-        groups=[_group_line(g, results.fields) for g in groups],
+        groups=[group_line(g, results.fields) for g in groups],
         conditions=list(dict.fromkeys(f.condition for f in results.fields if f.condition)),
         numeric=_NUMERIC,
         columns=_COLUMNS,
         wide=_WIDE,
-        rows=[_row(f, drawn[f.name]) for f in results.fields],
+        rows=[field_line(f, drawn[f.name]) for f in results.fields],
         any_change=any(f.change_only for f in results.fields),
         limits=LIMITS,
         meanings=results.columns,
@@ -153,7 +153,7 @@ def _moments(root: Path, groups: Sequence[Group]) -> dict[str, Any]:
         )
         inline = svg_text(linked, title="Contractile moment by condition")
     inline = inline[inline.index("<svg") :]
-    # Inside a page the figure's own style rules would reach everything else, and hundreds of marks would each be a tab stop.
+    # Inside a page the figure's own style rules would reach everything else, and each mark would be a tab stop.
     inline = re.sub(r"<style[^>]*>.*?</style>", "", inline, count=1, flags=re.S).replace("<a ", '<a tabindex="-1" ')
     return {"moments_svg": Markup(inline), "moments_file": "figures/moments.svg"}
 
@@ -166,30 +166,16 @@ def _moments_alt(groups: Sequence[Group]) -> str:
     return "Contractile moment of every cell by condition. " + " ".join(parts)
 
 
-def _group_line(group: Group, fields: Sequence[FieldResult]) -> dict[str, Any]:
-    """One line of the table of conditions: its fields by status, its cells, their mean and how well each is known."""
-    mine = [f for f in fields if group_label(f) == group.condition]
-    errors = [100 * c.sd / abs(c.value) for c in group.cells if c.sd is not None and c.value]
-    interval = f" ({plain(group.low)} to {plain(group.high)})" if group.low is not None else ""
-    count = {s: sum(f.status == s for f in mine) for s in ("ok", "caution", "failed")}
-    error = f"{median(errors):.2g} %" if errors else "—"
-    return {
-        "name": group.condition,
-        **count,
-        "cells": len(group.cells),
-        "mean": plain(group.mean) + interval,
-        "error": error,
-    }
-
-
 def _state_sentence(results: Results, drawn: Mapping[str, Pictures], excluded: int) -> str:
     """How much there is, and how much of it was proven to be whole; 'all good' only for N of N."""
     total, counts = len(results.fields), results.counts()
     usable = [f for f in results.fields if f.status in ("ok", "caution")]
     whole = sum(_verified(f, drawn[f.name]) for f in usable)
-    text = f"{len(usable)} of {total} fields gave numbers; {whole} of these {len(usable)} were verified against the hashes of their outputs."
+    text = (
+        f"{len(usable)} of {total} fields gave numbers; the outputs of {whole} of these were verified by their hashes."
+    )
     if total and counts["ok"] == total == whole:
-        text = f"All good: {total} of {total} fields are ok, and their outputs were verified against their hashes."
+        text = f"All good: {total} of {total} fields are ok, and their outputs were verified by their hashes."
     if excluded:
         text += f" {excluded} marked 'exclude' {'is' if excluded == 1 else 'are'} left out of the comparison."
     return text
@@ -201,68 +187,6 @@ def _verified(field: FieldResult, pictures: Pictures) -> bool:
     if not isinstance(outputs, Mapping) or not outputs or field.data is None:
         return False
     return dict(outputs) == {field.data.name: pictures.sha256}
-
-
-def _row(field: FieldResult, pictures: Pictures) -> dict[str, Any]:
-    """One line of the table of fields; ``data`` is what the page sorts and filters by."""
-    cells = [r for r in field.cells if number(r, "contractile_moment_pNm") is not None]
-    series = len({r.get("frame") for r in cells}) > 1
-    moments, axes = [], []
-    for name in field.cell_names[:6]:
-        rows = [r for r in cells if r.get("cell") == name]
-        if not rows:
-            continue
-        strongest = max(rows, key=lambda r: abs(number(r, "contractile_moment_pNm") or 0.0))
-        sd = number(strongest, "contractile_moment_total_sd_pNm") or number(strongest, "contractile_moment_sd_pNm")
-        moments.append(("max " if series else "") + with_error(number(strongest, "contractile_moment_pNm"), sd))
-        axes.append(with_error(number(strongest, "axis_deg"), number(strongest, "axis_sd_deg")))
-    if len(field.cell_names) > 6:
-        moments.append(f"and {len(field.cell_names) - 6} more")
-    values = [v for v in (number(r, "contractile_moment_pNm") for r in cells) if v is not None]
-    energies = [v for v in (number(r, "strain_energy_fJ") for r in cells) if v is not None]
-    misfits = [v for v in (number(r, "misfit") for r in field.frames) if v is not None]
-    noises = [1e3 * v for v in (number(r, "displacement_noise_um") for r in field.frames) if v is not None]
-    first_axis = number(cells[0], "axis_deg") if cells else None
-    error = relative_error(field)
-    gel = (field.gel or {}).get("verdict", "")
-    top = {
-        "moment": max(values, default=None),
-        "error": error,
-        "axis": first_axis,
-        "energy": max(energies, default=None),
-        "misfit": max(misfits, default=None),
-        "noise": max(noises, default=None),
-    }
-    data: dict[str, Any] = {
-        "status": field.status,
-        "condition": field.condition,
-        "cells": len(field.cell_names),
-        "gel": gel,
-        "notes": field.message,
-    }
-    data |= {k: f"{v:.6g}" if v is not None else "" for k, v in top.items()}
-    if values:
-        data["moment-low"] = f"{min(values):.6g}"
-    alt = f"{field.name}: " + (
-        "; ".join(f"cell {n}: {m} pN m" for n, m in zip(field.cell_names, moments, strict=False)) or "no number"
-    )
-    search = " ".join((field.name, field.condition, field.message, field.status, gel)).lower()
-    thumb = f"figures/{field.folder}/{pictures.thumb}" if pictures.thumb else ""
-    return {
-        "field": field,
-        "thumb": thumb,
-        "alt": alt,
-        "search": search,
-        "data": data,
-        "cells": len(field.cell_names) or "—",
-        "moments": moments or ["—"],
-        "axes": axes or ["—"],
-        "error": plain(error, 2),
-        "energy": plain(top["energy"]),
-        "misfit": plain(top["misfit"]),
-        "noise": plain(top["noise"], 2),
-        "gel": gel or "—",
-    }
 
 
 def _setting(run: Mapping[str, Any], name: str) -> str:
@@ -285,5 +209,5 @@ def _provenance(run: Mapping[str, Any]) -> list[tuple[str, str]]:
 
 
 def _run_key(results: Results) -> str:
-    """Tells this study's decisions from another's in the browser's storage: the fields' names, whatever the folder's place."""
+    """Tells this study's decisions from another's in the browser's storage, wherever the folder lies."""
     return hashlib.sha256("\n".join(f.name for f in results.fields).encode()).hexdigest()[:16]

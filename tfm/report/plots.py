@@ -178,7 +178,7 @@ def draw_traction(
     arrows: int = 30,
     key: bool = True,
 ) -> AxesImage:
-    """Size of the traction as colour, its direction as arrows, the outlines on top; ground without traction stays blank.
+    """Size of the traction as colour, its direction as arrows, outlines on top; ground without traction stays blank.
 
     ``x`` ``(nx,)`` m, ``y`` ``(ny,)`` m, ``traction`` ``(2, ny, nx)`` Pa, the force per area of the cell on the gel.
     Returns the image for a colour bar in kPa.
@@ -225,7 +225,7 @@ def draw_traction(
 
 
 def draw_contraction(ax: Axes, x: ArrayLike, y: ArrayLike, traction: ArrayLike, labels: ArrayLike) -> AxesImage:
-    """Where the contractile moment is made: -(x - c) . T in nN/um, whose integral over a cell is its contractile moment.
+    """Where the contractile moment is made: -(x - c) . T in nN/um, whose integral over a cell is its moment.
 
     Positive (purple) pulls towards the cell's centroid c, negative (orange) pushes away; zero lies in the middle of
     the map. (For a cell in balance the integral does not depend on c; the map does.)

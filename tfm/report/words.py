@@ -83,7 +83,8 @@ def alt_maps(field: FieldResult, rows: list[Row]) -> str:
     tractions = [number(r, "traction_peak_Pa") for r in rows]
     known, pulls = [p for p in peaks if p is not None], [t for t in tractions if t is not None]
     parts = [
-        "Three maps, x to the right and y down: displacement arrows over the beads, traction with outlines, and where the moment is made."
+        "Three maps, x to the right and y down: displacement arrows over the beads, traction with outlines, "
+        "and where the moment is made."
     ]
     if known:
         parts.append(f"Largest displacement {max(known):.2g} µm.")
