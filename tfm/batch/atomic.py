@@ -92,6 +92,8 @@ def _sync_folder(folder: Path) -> None:
 def atomic_file(path: Path, *, verify: Callable[[Path], None] | None = None) -> Iterator[Path]:
     """A temporary path to write to; on success it becomes ``path`` in one step.
 
+    Writing to the temporary path is the caller's matter, errors included (:func:`storage_guard`).
+
     Parameters
     ----------
     path
@@ -106,8 +108,8 @@ def atomic_file(path: Path, *, verify: Callable[[Path], None] | None = None) -> 
     """
     temporary = path.with_name(f"{_TEMPORARY}{socket.gethostname()[:32]}-{os.getpid()}-{time.monotonic_ns():x}")
     try:
+        yield temporary
         with storage_guard(path):
-            yield temporary
             if verify is not None:
                 verify(temporary)
             with temporary.open("rb+") as stream:
@@ -131,7 +133,7 @@ def write_text(path: Path, text: str) -> None:
     with storage_guard(path):
         if path.is_file() and path.read_bytes() == data:
             return
-    with atomic_file(path, verify=verify) as temporary:
+    with atomic_file(path, verify=verify) as temporary, storage_guard(path):
         temporary.write_bytes(data)
 
 
