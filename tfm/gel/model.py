@@ -29,6 +29,14 @@ def _positive(name: str, value: object, remedy: str) -> float:
     return number
 
 
+def _poisson(value: object) -> float:
+    remedy = "give a Poisson ratio from 0 to 0.5"
+    poisson = _number("poisson", value, remedy)
+    if not 0.0 <= poisson <= 0.5:
+        raise InputError(f"poisson is {poisson:g}, outside 0 to 0.5", code="bad-gel", remedy=remedy)
+    return poisson
+
+
 @dataclass(frozen=True)
 class Gel:
     """A linear, isotropic gel, infinitely thick or bonded to a rigid base.
@@ -74,11 +82,7 @@ class Gel:
 
     def __post_init__(self) -> None:
         modulus = _positive("youngs_modulus", self.youngs_modulus, "give Young's modulus in Pa, for instance 5e3")
-        poisson = _number("poisson", self.poisson, "give a Poisson ratio from 0 to 0.5")
-        if not 0.0 <= poisson <= 0.5:
-            raise InputError(
-                f"poisson is {poisson:g}, outside 0 to 0.5", code="bad-gel", remedy="give a Poisson ratio from 0 to 0.5"
-            )
+        poisson = _poisson(self.poisson)
         thickness = self.thickness
         if thickness is not None:
             thickness = _positive(
@@ -143,7 +147,8 @@ class Gel:
                 code="bad-gel",
                 remedy="give one standard deviation, 0 or more",
             )
-        plain = cls(2.0 * modulus * (1.0 + poisson), poisson, thickness, 0.0, poisson_sd, thickness_sd)
+        nu = _poisson(poisson)
+        plain = cls(2.0 * modulus * (1.0 + nu), nu, thickness, 0.0, poisson_sd, thickness_sd)
         from_nu = 2.0 * modulus * plain.poisson_sd
         sd = math.hypot(2.0 * (1.0 + plain.poisson) * modulus_sd, from_nu)
         return cls(

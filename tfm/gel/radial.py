@@ -47,7 +47,7 @@ _ORDERS = (
 )
 #: Power of the length that each column carries: a_n ~ length^-(2n + 1), b_n ~ length^-(2n - 1).
 _POWER = {**{f"a{n}": 2 * n + 1 for n in range(4)}, **{f"b{n}": 2 * n - 1 for n in range(1, 6)}}
-_STEP = 4e-3  # in nu, for the five-point derivative of the table: its error is of order step^4 / 30
+_STEP = 1e-3  # in nu, for the five-point derivative of the table: truncation and rounding are both near 1e-11
 
 
 def _half_space(r: Array, nu: float, names: tuple[str, ...]) -> RadialFunctions:
