@@ -217,7 +217,7 @@ def make_folder(
     return root
 
 
-@pytest.fixture(name="make_folder")
+@pytest.fixture(scope="session", name="make_folder")
 def _make_folder() -> Callable[..., Path]:
     return make_folder
 

@@ -80,9 +80,9 @@ _CAPTIONS = {
     "maps": (
         "What moved, what pulled, where the moment is made",
         "Arrows are measured vectors (not every one), coloured by size and drawn to the scale of the bar in the lower "
-        "left corner; dots are vectors below twice their noise. In the right map purple pulls towards the cell's centroid "
-        "and orange pushes away. Bars with arrow heads are the principal axes: heads point inwards along an axis that "
-        "contracts, and the shaded tips are 95 % regions of angle and size.",
+        "left corner; dots are vectors below twice their noise. In the right map purple pulls towards the cell's "
+        "centroid and orange pushes away. Bars with arrow heads are the principal axes: heads point inwards along an "
+        "axis that contracts, and the shaded tips are 95 % regions of angle and size.",
     ),
     "beads": (
         "Relaxed and stressed beads on top of each other",

@@ -131,7 +131,7 @@ def verdict_sentence(groups: Sequence[Group], found: Sequence[Difference]) -> st
     word = "significant" if d.significant else "not significant"
     p = f"{d.p:.2g}" if d.p >= 1e-4 else "< 0.0001"
     return (
-        f"{d.more.condition} pulls harder than {d.less.condition}: {plain(d.value, 2)} pN m more "
-        f"(95 %: {plain(d.low, 2)} to {plain(d.high, 2)}), {word} (p {'= ' if d.p >= 1e-4 else ''}{p}; "
+        f"{d.more.condition} pulls harder than {d.less.condition}: {plain(d.value, 2)} pN m more "
+        f"(95 %: {plain(d.low, 2)} to {plain(d.high, 2)}), {word} (p {'= ' if d.p >= 1e-4 else ''}{p}; "
         f"{len(d.more.cells)} and {len(d.less.cells)} cells)."
     )

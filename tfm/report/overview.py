@@ -30,7 +30,14 @@ def draw_moments(ax: Axes, groups: Sequence[Group], *, links: bool = False) -> N
         ax.plot([group.mean, group.mean], [band - 0.45, band + 0.45], color=LINE, lw=2.0, zorder=2)
         reach = np.array([1.96 * (c.sd or 0.0) for c in cells])
         values = np.array([c.value for c in cells])
-        ax.hlines(rows, values - reach, values + reach, color=QUIET, lw=0.9, zorder=3)
+        ax.hlines(
+            rows,
+            values - reach,
+            values + reach,
+            color="#9aa3ad",
+            lw=float(np.clip(24 / len(cells), 0.2, 1.0)),
+            zorder=1.5,
+        )
         for status, marker, face in (("ok", "o", MARKS["ok"][1]), ("caution", "^", "#ffffff")):
             chosen = [i for i, c in enumerate(cells) if c.status == status]
             if chosen:

@@ -60,7 +60,7 @@ Array = NDArray[np.float64]
 
 
 def draw_beads(
-    ax: Axes, x: ArrayLike, y: ArrayLike, image: ArrayLike, *, levels: int = 24, gain: float = 0.62
+    ax: Axes, x: ArrayLike, y: ArrayLike, image: ArrayLike, *, levels: int = 24, gain: float = 0.5
 ) -> AxesImage:
     """Beads in dim grey as a background, stretched between the 2nd and 99.7th percentile.
 
