@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from scipy import special
 
 from tfm.images.model import Outlines
-from tfm.moments.energy import energy_matrix, quadratic_moments
+from tfm.moments.energy import energy_matrix, mixture_energy
 from tfm.moments.model import CellDipole
 from tfm.moments.tensor import axis_deviation, outline_axis, principal_axes
 from tfm.traction.model import TractionField
@@ -170,7 +170,7 @@ def _from_posterior(
 ) -> NDArray[np.float64]:  # fmt: skip
     """Fill in what the posterior knows better than its mean field, and return the total covariance."""
     p = traction.posterior
-    if p is None or traction.data is None:
+    if p is None or traction.data is None or traction.solution is None:
         return np.zeros((3, 3))
     f = dipole_functionals(traction, label, centroid)[:3]
     covariance = f @ p.covariance @ f.T
@@ -179,7 +179,7 @@ def _from_posterior(
     # Strain energy of this cell: half the integral over it of T . u with the whole field's displacement.
     own = np.tile(traction.data.basis.node_labels == label, 2)
     q = 0.25 * (energy * own[:, None] + energy * own[None, :])
-    numbers["strain_energy"], numbers["strain_energy_sd"] = quadratic_moments(q, p.mean, p.covariance)
+    numbers["strain_energy"], numbers["strain_energy_sd"] = mixture_energy(q, traction.solution)
     cells = p.labels == label
     weights = p.basis[cells]
     n = weights.shape[1]

@@ -14,10 +14,10 @@ from numpy.typing import NDArray
 
 from tfm.errors import InputError
 from tfm.gel import displacement, node_kernel
-from tfm.traction.gaussian import LinearData, response_matrix
+from tfm.traction.gaussian import LinearData, Solution, response_matrix
 from tfm.traction.model import TractionField
 
-__all__ = ["energy_matrix", "field_strain_energy", "quadratic_moments"]
+__all__ = ["energy_matrix", "field_strain_energy", "mixture_energy", "quadratic_moments"]
 
 
 def energy_matrix(data: LinearData, traction: TractionField) -> NDArray[np.float64]:
@@ -53,6 +53,22 @@ def quadratic_moments(
     value = float(mean @ qm) + float(np.trace(qs))
     variance = 4.0 * float(qm @ covariance @ qm) + 2.0 * float(np.sum(qs * qs.T))
     return value, float(np.sqrt(max(variance, 0.0)))
+
+
+#: Relative uncertainty of the energy that only the prior speaks for (finer than the beads resolve).
+UNSEEN = 0.5
+
+
+def mixture_energy(q: NDArray[np.float64], solution: Solution) -> tuple[float, float]:
+    """Expectation and standard deviation of ``c^T q c`` over the mixture of posteriors.
+
+    The part ``trace(q covariance)`` is energy of structure that the beads do not resolve; the prior supplies its size, and how
+    adhesions are really shaped changes it by half of itself or so. That uncertainty is added.
+    """
+    values = [(c.weight, *quadratic_moments(q, c.mean, c.covariance), float(np.sum(q * c.covariance))) for c in solution.components]
+    mean = sum(w * v for w, v, _, _ in values)
+    variance = sum(w * (sd**2 + (UNSEEN * unseen) ** 2 + (v - mean) ** 2) for w, v, sd, unseen in values)
+    return float(mean), float(np.sqrt(variance))
 
 
 def field_strain_energy(traction: TractionField, *, route: str = "real space") -> float:

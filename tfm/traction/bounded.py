@@ -4,7 +4,6 @@ pixels: the pixel method in :mod:`tfm.traction.pixels` shares everything but the
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,15 +13,16 @@ from tfm.errors import MeasurementError
 from tfm.gel import Gel
 from tfm.images.model import Outlines
 from tfm.traction.blocks import make_blocks
-from tfm.traction.gaussian import LinearData, Solution, best_posterior, normal_equations
+from tfm.traction.gaussian import Component, LinearData, NormalEquations, Solution, best_posterior, normal_equations
 from tfm.traction.lattice import Lattice, NodeBasis, cover_outlines, make_nodes, touching_cells
 from tfm.traction.model import TractionField
+from tfm.traction.prior import SHAPES, CellPrior
 from tfm.traction.result import make_result
 
 __all__ = ["LENGTHS", "choose_step", "infer_bounded", "vector_data", "whole_groups"]
 
 #: Correlation lengths that the evidence chooses from, m: from a small adhesion to a whole protrusion.
-LENGTHS: tuple[float, ...] = (1.0e-6, 1.4e-6, 2.0e-6, 2.8e-6, 4.0e-6, 5.7e-6, 8.0e-6, 11.3e-6)
+LENGTHS: tuple[float, ...] = (0.7e-6, 1.0e-6, 1.4e-6, 2.0e-6, 2.8e-6, 4.0e-6, 5.7e-6)
 
 
 def choose_step(covered: NDArray[np.int32], *, most: int = 1100) -> int:
@@ -87,27 +87,44 @@ def vector_data(
     )  # fmt: skip
 
 
-def first_guess(data: LinearData, gel: Gel) -> NDArray[np.float64]:
-    """Order of magnitude of each cell's traction (Pa), from the displacement under it: E |u| / 10 um."""
+def first_guess(data: LinearData, gel: Gel) -> tuple[Component, ...]:
+    """Where the search for the prior's strength begins: traction of the order E |u| / 10 um."""
     labels = np.unique(data.basis.node_labels)
-    size = np.sqrt(np.sum((data.value - np.median(data.value, axis=1, keepdims=True)) ** 2, axis=0))
-    guess = gel.youngs_modulus * np.quantile(size, 0.95) / 10e-6
-    return np.full(labels.size, max(float(guess), 1.0))
+    size = np.hypot(*(data.value - np.median(data.value, axis=1, keepdims=True)))
+    guess = max(gel.youngs_modulus * float(np.quantile(size, 0.95)) / 10e-6, 1e-3 * gel.youngs_modulus * 1e-3)
+    none = np.zeros(0)
+    return tuple(
+        Component(1.0 / len(SHAPES), shape, 1.4e-6, np.full(labels.size, guess), none, none, 0.0) for shape in SHAPES
+    )
 
 
 def solve(
-    data: LinearData, gel: Gel, *, start: Solution | None = None, lengths: Sequence[float] = LENGTHS, **reuse: Any
-) -> tuple[Solution, Any]:
-    """Normal equations and the posterior of highest evidence; ``start`` gives the prior strength to begin with."""
-    normal = normal_equations(data, gel, response=reuse.get("response"))
-    # A correlation length below the node spacing cannot be represented.
-    usable = [v for v in lengths if v >= 0.9 * data.basis.step * data.lattice.spacing] or [lengths[-1]]
-    solution = best_posterior(
-        data, normal,
-        start_amplitude=first_guess(data, gel) if start is None else start.amplitudes,
-        lengths=usable, start_length=2.8e-6 if start is None else start.length,
-        tolerance=float(reuse.get("tolerance", 0.02)), priors=reuse.get("priors"),
-    )  # fmt: skip
+    data: LinearData,
+    gel: Gel,
+    *,
+    start: Sequence[Component] | None = None,
+    response: NDArray[np.float64] | None = None,
+    priors: dict[tuple[str, float], tuple[CellPrior, ...]] | None = None,
+    tolerance: float = 0.03,
+    search: bool = True,
+) -> tuple[Solution, NormalEquations]:
+    """Normal equations and the posterior of highest evidence.
+
+    Parameters
+    ----------
+    start
+        Components to begin with; without, a rough guess.
+    response, priors
+        What may be reused while gel, data positions and outlines stay the same.
+    search
+        False keeps the correlation lengths of ``start`` and only follows the amplitude.
+    """
+    normal = normal_equations(data, gel, response=response)
+    begin = first_guess(data, gel) if start is None else tuple(start)
+    # A correlation length well below the node spacing cannot be represented.
+    usable = [v for v in LENGTHS if v >= 0.6 * data.basis.step * data.lattice.spacing] or [LENGTHS[-1]]
+    lengths = usable if search else sorted({c.length for c in begin})
+    solution = best_posterior(data, normal, start=begin, lengths=lengths, tolerance=tolerance, priors=priors)
     return solution, normal
 
 
@@ -170,4 +187,7 @@ def infer_bounded(
             f"only {data.rows.size} valid displacement vectors", code="too-few-vectors", remedy="use more or brighter beads"
         )
     solution, normal = solve(data, gel)
-    return make_result(data, gel, covered, solution, normal, method="bounded", misfit=None, cut=cut, notes=field.notes)
+    # Windows that overlap share pixels: as many degrees of freedom as independent vectors, not as vectors.
+    independent = normal.count * min(1.0, spacing**2 / field.independent_area)
+    misfit = solution.chi_square / max(independent - (normal.count - solution.degrees), 1.0)
+    return make_result(data, gel, covered, solution, method="bounded", misfit=misfit, cut=cut, notes=field.notes)

@@ -20,7 +20,19 @@ from tfm.gel import Gel, node_kernel
 from tfm.traction.lattice import Lattice, NodeBasis
 from tfm.traction.prior import CellPrior, first_moments, make_prior
 
-__all__ = ["LinearData", "NormalEquations", "Solution", "balance_rows", "best_posterior", "normal_equations", "posterior"]
+__all__ = [
+    "Component",
+    "LinearData",
+    "NormalEquations",
+    "Solution",
+    "balance_rows",
+    "best_posterior",
+    "fixed_posterior",
+    "normal_equations",
+    "nuisance_columns",
+    "posterior",
+    "response_matrix",
+]
 
 
 @dataclass(frozen=True)
@@ -74,35 +86,50 @@ class NormalEquations:
 
 
 @dataclass(frozen=True)
+class Component:
+    """Posterior under one shape and correlation length of the prior; ``weight`` is its share in the mixture."""
+
+    weight: float
+    shape: str
+    length: float
+    amplitudes: NDArray[np.float64]
+    mean: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    log_evidence: float
+
+
+@dataclass(frozen=True)
 class Solution:
-    """Posterior at one prior.
+    """Posterior, averaged over the shapes of the prior.
 
     Attributes
     ----------
     mean, covariance
-        ``(2 n,)`` Pa and ``(2 n, 2 n)`` Pa^2.
+        ``(2 n,)`` Pa and ``(2 n, 2 n)`` Pa^2 of the mixture: the spread between its components is part of the covariance.
     nuisance
         Estimated offset (m), rotation (rad) and scale.
     log_evidence
-        Natural logarithm, up to a constant that depends on data and outlines but not on gel, amplitude or length.
-    amplitudes, length
-        Pa for each cell (order of ``np.unique(labels)``), m.
+        Natural logarithm of the mixture's evidence, up to a constant that depends on data and outlines but not on gel,
+        amplitude, length or shape.
+    components
+        What was averaged.
     chi_square, degrees
         Misfit and its expectation.
     iterations
-        Of the prior's strength.
+        Evaluations of the posterior that the prior's strength took.
+    profile
+        Log evidence by shape and correlation length (m), as far as it was searched.
     """
 
     mean: NDArray[np.float64]
     covariance: NDArray[np.float64]
     nuisance: NDArray[np.float64]
     log_evidence: float
-    amplitudes: NDArray[np.float64]
-    length: float
+    components: tuple[Component, ...]
     chi_square: float
     degrees: float
     iterations: int = 0
-    profile: tuple[tuple[float, float], ...] = ()
+    profile: tuple[tuple[str, float, float], ...] = ()
 
 
 def _shifted(kernel: NDArray[np.float64], fr: float, fc: float) -> NDArray[np.float64]:
@@ -212,9 +239,9 @@ def normal_equations(data: LinearData, gel: Gel, *, response: NDArray[np.float64
 
 
 def posterior(
-    normal: NormalEquations, prior: Sequence[CellPrior], amplitudes: NDArray[np.float64], length: float
-) -> tuple[Solution, NDArray[np.float64]]:
-    """Posterior at a given prior strength, and each cell's number of well-determined coefficients.
+    normal: NormalEquations, prior: Sequence[CellPrior], amplitudes: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], float, NDArray[np.float64]]:
+    """Mean, covariance, log evidence and each cell's number of well-determined coefficients at a given prior strength.
 
     Raises
     ------
@@ -224,32 +251,34 @@ def posterior(
     s = normal.information.copy()
     for cell, a in zip(prior, amplitudes, strict=True):
         s[np.ix_(cell.index, cell.index)] += cell.precision / a**2
-    scale = 1.0 / np.sqrt(np.diag(s))
-    try:
-        factor = linalg.cholesky(s * scale * scale[:, None], lower=True, overwrite_a=True, check_finite=False)
-    except linalg.LinAlgError as error:
-        raise ConvergenceError(
-            "the beads do not determine the traction inside the outline", code="undetermined",
-            remedy="check that the outline lies on ground with beads",
-        ) from error  # fmt: skip
+    diagonal = np.diag(s)
+    if not np.all(diagonal > 0):
+        raise _undetermined()
+    scale = 1.0 / np.sqrt(diagonal)
+    s *= scale
+    s *= scale[:, None]
+    # A factor of a symmetric matrix in C order is the transposed factor in Fortran order: no copy is made.
+    factor, info = linalg.lapack.dpotrf(s.T, lower=True, overwrite_a=True, clean=False)
+    if info != 0:
+        raise _undetermined()
     log_det = 2.0 * np.log(np.diag(factor)).sum() - 2.0 * np.log(scale).sum()
     inverse, info = linalg.lapack.dpotri(factor, lower=True, overwrite_c=True)
     if info != 0:
-        raise ConvergenceError("the posterior's covariance could not be formed", code="undetermined")
+        raise _undetermined()
     covariance = np.tril(inverse)
     covariance += np.tril(covariance, -1).T
     covariance *= scale
     covariance *= scale[:, None]
     mean = covariance @ normal.score
-    quadratic = float(normal.score @ mean)
-    log_evidence = -0.5 * normal.energy + 0.5 * quadratic - 0.5 * log_det
+    log_evidence = -0.5 * normal.energy + 0.5 * float(normal.score @ mean) - 0.5 * log_det
     b = normal.balance
     if b.shape[0]:
         cb = covariance @ b.T
         bcb = b @ cb
         gain = linalg.solve(bcb, cb.T, assume_a="pos").T
         excess = b @ mean
-        log_evidence -= 0.5 * np.linalg.slogdet(bcb)[1] + 0.5 * float(excess @ linalg.solve(bcb, excess, assume_a="pos"))
+        log_evidence -= 0.5 * np.linalg.slogdet(bcb)[1]
+        log_evidence -= 0.5 * float(excess @ linalg.solve(bcb, excess, assume_a="pos"))
         mean = mean - gain @ excess
         covariance -= gain @ cb.T
         # A second pass takes the balance from 1e-9 to rounding.
@@ -259,74 +288,130 @@ def posterior(
         block = covariance[np.ix_(cell.index, cell.index)]
         determined[i] = cell.rank - float(np.sum(cell.precision * block)) / a**2
         log_evidence += cell.log_normaliser - cell.rank * np.log(a)
-    chi_square = normal.energy - 2.0 * float(mean @ normal.score) + float(mean @ (normal.information @ mean))
-    # Expected misfit: data minus what the fit has absorbed, trace(information covariance).
-    absorbed = float(np.sum(normal.information * covariance))
-    nuisance = normal.motion_solver[:, 0] + normal.motion_solver[:, 1:] @ mean
-    return (
-        Solution(mean, covariance, nuisance, float(log_evidence), amplitudes, length, chi_square, normal.count - absorbed),
-        determined,
+    return mean, covariance, float(log_evidence), determined
+
+
+def _undetermined() -> ConvergenceError:
+    return ConvergenceError(
+        "the beads do not determine the traction inside the outline",
+        code="undetermined",
+        remedy="check that the outline lies on ground with beads",
     )
 
 
 def _strengthen(
-    normal: NormalEquations, prior: Sequence[CellPrior], start: NDArray[np.float64], length: float, tolerance: float
-) -> Solution:
-    """Amplitude of every cell by maximum evidence (MacKay's fixed point, with steps extrapolated in log amplitude)."""
+    normal: NormalEquations, prior: Sequence[CellPrior], start: NDArray[np.float64], tolerance: float
+) -> tuple[Component, int]:
+    """Amplitude of every cell by maximum evidence (MacKay's fixed point, extrapolated in log amplitude)."""
     log_a = np.log(start)
-    previous: tuple[NDArray[np.float64], NDArray[np.float64]] | None = None
-    for iteration in range(1, 41):
-        solution, determined = posterior(normal, prior, np.exp(log_a), length)
-        size = np.array([float(solution.mean[c.index] @ (c.precision @ solution.mean[c.index])) for c in prior])
-        # Fewer than half a coefficient determined: the data carry no structure beyond the moments, stop the collapse.
-        step = 0.5 * np.log(np.maximum(size, 1e-300) / np.maximum(determined, 0.5)) - log_a
-        step = np.clip(step, -1.5, 1.5)
+    old_step: NDArray[np.float64] | None = None
+    for iteration in range(1, 31):
+        mean, covariance, log_evidence, determined = posterior(normal, prior, np.exp(log_a))
+        size = np.array([float(mean[c.index] @ (c.precision @ mean[c.index])) for c in prior])
+        target = 0.5 * np.log(np.maximum(size, 1e-300) / np.maximum(determined, 0.5))
+        # The evidence of a faint cell has its maximum at no structure at all, a traction that only grows outwards from the
+        # middle. Real cells pull at spots: the rest is never much fainter than the traction that carries the moments.
+        floor = np.log([0.5 * np.sqrt(np.mean(mean[c.index] ** 2)) + 1e-30 for c in prior])
+        step = np.clip(np.maximum(target, floor) - log_a, -1.5, 1.5)
         if np.all(np.abs(step) < tolerance):
-            return replace(solution, iterations=iteration)
-        if previous is not None:  # Aitken: the fixed point contracts slowly when few coefficients are determined
-            old_step, old_log = previous
-            rate = np.clip(step / np.where(np.abs(old_step) > 1e-12, old_step, 1.0), -0.5, 0.8)
-            move = step / (1.0 - rate)
-        else:
+            break
+        if old_step is None:
             move = step
-        previous = (step, log_a)
-        log_a = log_a + np.clip(move, -2.0, 2.0)
-        if np.any(log_a < np.log(start) - 12):
-            log_a = np.maximum(log_a, np.log(start) - 12)
-    return replace(solution, iterations=iteration)
+        else:  # Aitken: the fixed point contracts slowly when few coefficients are determined
+            rate = np.clip(step / np.where(np.abs(old_step) > 1e-12, old_step, 1.0), -0.5, 0.7)
+            move = step / (1.0 - rate)
+        old_step = step
+        log_a = log_a + np.clip(move, -1.5, 1.5)
+    return Component(1.0, "", 0.0, np.exp(log_a), mean, covariance, log_evidence), iteration
+
+
+def fixed_posterior(
+    data: LinearData, normal: NormalEquations, components: Sequence[Component], *, amplitude_factor: float = 1.0
+) -> Solution:
+    """Posterior with lengths, shapes, amplitudes (times a factor) and weights taken over from ``components``."""
+    found = []
+    for c in components:
+        prior = make_prior(data.basis, data.lattice, length=c.length, shape=c.shape)
+        amplitudes = c.amplitudes * amplitude_factor
+        mean, covariance, log_evidence, _ = posterior(normal, prior, amplitudes)
+        found.append(replace(c, amplitudes=amplitudes, mean=mean, covariance=covariance, log_evidence=log_evidence))
+    return _mixture(normal, found, len(found), ())
 
 
 def best_posterior(
     data: LinearData,
     normal: NormalEquations,
     *,
-    start_amplitude: NDArray[np.float64],
+    start: Sequence[Component],
     lengths: Sequence[float],
-    start_length: float,
-    tolerance: float = 0.02,
-    priors: dict[float, tuple[CellPrior, ...]] | None = None,
+    tolerance: float = 0.03,
+    priors: dict[tuple[str, float], tuple[CellPrior, ...]] | None = None,
 ) -> Solution:
-    """Posterior at the amplitude and correlation length of highest evidence.
+    """Posterior at the amplitude and correlation length of highest evidence, averaged over the shapes in ``start``.
 
-    ``lengths`` is searched from ``start_length`` towards higher evidence; ``priors`` caches what does not depend on the data.
+    Parameters
+    ----------
+    start
+        One component per shape: its ``length`` and ``amplitudes`` are where the search begins.
+    lengths
+        m, ascending: correlation lengths that may be chosen.
+    priors
+        Cache of what does not depend on the data.
     """
     cache = {} if priors is None else priors
-    done: dict[int, Solution] = {}
-    start = start_amplitude
+    found: list[Component] = []
+    profile: list[tuple[str, float, float]] = []
+    evaluations = 0
+    for begin in start:
+        amplitudes = begin.amplitudes
+        done: dict[int, Component] = {}
+        best = int(np.argmin(np.abs(np.log(np.asarray(lengths) / begin.length))))
+        queue = [best]
+        while queue:
+            i = queue.pop()
+            key = (begin.shape, lengths[i])
+            if key not in cache:
+                cache[key] = make_prior(data.basis, data.lattice, length=lengths[i], shape=begin.shape)
+            component, count = _strengthen(normal, cache[key], amplitudes, tolerance)
+            evaluations += count
+            amplitudes = component.amplitudes
+            done[i] = replace(component, shape=begin.shape, length=lengths[i], weight=1.0 / len(start))
+            best = max(done, key=lambda j: done[j].log_evidence + _length_belief(done[j].length))
+            queue = [j for j in (best + 1, best - 1) if 0 <= j < len(lengths) and j not in done]
+        found.append(done[best])
+        profile += [(begin.shape, lengths[i], c.log_evidence) for i, c in sorted(done.items())]
+    return _mixture(normal, found, evaluations, tuple(profile))
 
-    def at(i: int) -> Solution:
-        nonlocal start
-        if i not in done:
-            if lengths[i] not in cache:
-                cache[lengths[i]] = make_prior(data.basis, data.lattice, length=lengths[i])
-            done[i] = _strengthen(normal, cache[lengths[i]], start, lengths[i], tolerance)
-            start = done[i].amplitudes
-        return done[i]
 
-    best = int(np.argmin(np.abs(np.asarray(lengths) - start_length)))
-    at(best)
-    for direction in (-1, 1):
-        while 0 <= best + direction < len(lengths) and at(best + direction).log_evidence > done[best].log_evidence:
-            best += direction
-    profile = tuple(sorted((lengths[i], s.log_evidence) for i, s in done.items()))
-    return replace(done[best], profile=profile)
+def _length_belief(length: float) -> float:
+    """Log prior of the correlation length: adhesions are one to a few um wide (common practice), log-normal, 1.6 um x/: 1.7."""
+    return float(-0.5 * (np.log(length / 1.6e-6) / np.log(1.7)) ** 2)
+
+
+def _mixture(
+    normal: NormalEquations, found: Sequence[Component], evaluations: int, profile: tuple[tuple[str, float, float], ...]
+) -> Solution:
+    # Shapes weigh alike: their evidence is decisive only if one of them were true, and none is.
+    weights = np.array([c.weight for c in found])
+    mean = np.einsum("k,ki->i", weights, np.stack([c.mean for c in found]))
+    covariance = np.zeros_like(found[0].covariance)
+    for c in found:
+        away = c.mean - mean
+        covariance += c.weight * c.covariance
+        covariance += c.weight * np.outer(away, away)
+    chi_square = normal.energy - 2.0 * float(mean @ normal.score) + float(mean @ (normal.information @ mean))
+    # Expected misfit: data minus what the fit has absorbed, trace(information covariance).
+    absorbed = float(np.sum(normal.information * covariance))
+    evidence = np.array([c.log_evidence for c in found])
+    top = evidence.max()
+    return Solution(
+        mean,
+        covariance,
+        normal.motion_solver[:, 0] + normal.motion_solver[:, 1:] @ mean,
+        float(top + np.log(np.sum(weights * np.exp(evidence - top)))),
+        tuple(found),
+        chi_square,
+        normal.count - absorbed,
+        evaluations,
+        profile,
+    )

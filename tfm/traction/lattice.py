@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
+from scipy import ndimage, sparse
 
 from tfm.errors import MeasurementError
 
@@ -45,6 +45,8 @@ class NodeBasis:
         ``(n_cells, n)`` CSR matrix of bilinear hats, cut at the outline; rows sum to one.
     node_rows, node_columns, node_labels
         ``(n,)`` position of every node in lattice units, and its cell.
+    node_depth
+        ``(n,)`` distance of every node from the rim of its cell, in lattice units (about 0 outside).
     step
         Node spacing in lattice units.
     """
@@ -56,6 +58,7 @@ class NodeBasis:
     node_rows: NDArray[np.float64]
     node_columns: NDArray[np.float64]
     node_labels: NDArray[np.int32]
+    node_depth: NDArray[np.float64]
     step: int
 
     @property
@@ -148,7 +151,7 @@ def make_nodes(covered: NDArray[np.int32], *, step: int) -> NodeBasis:
     """
     parts: list[sparse.csr_matrix] = []
     rows, columns, labels = [], [], []
-    node_rows, node_columns, node_labels = [], [], []
+    node_rows, node_columns, node_labels, depths = [], [], [], []
     for label in (int(v) for v in np.unique(covered) if v > 0):
         r, c = np.nonzero(covered == label)
         weights, nr, nc = _hats(r, c, step)
@@ -159,12 +162,15 @@ def make_nodes(covered: NDArray[np.int32], *, step: int) -> NodeBasis:
         node_rows.append(nr)
         node_columns.append(nc)
         node_labels.append(np.full(nr.size, label, np.int32))
+        # Centres of the outermost lattice cells lie half a cell inside the rim.
+        depth = ndimage.distance_transform_edt(covered == label) - 0.5
+        depths.append(ndimage.map_coordinates(depth, np.stack([nr, nc]), order=1, mode="nearest"))
     if not parts:
         raise MeasurementError("no outline lies inside the image", code="no-outline", remedy="check the outline's frame")
     return NodeBasis(
         np.concatenate(rows), np.concatenate(columns), np.concatenate(labels),
         sparse.block_diag(parts, format="csr"),
-        np.concatenate(node_rows), np.concatenate(node_columns), np.concatenate(node_labels), step,
+        np.concatenate(node_rows), np.concatenate(node_columns), np.concatenate(node_labels), np.concatenate(depths), step,
     )  # fmt: skip
 
 

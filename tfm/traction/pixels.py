@@ -8,7 +8,6 @@ sensitivity as precision. There is no interrogation window, so a steep gradient 
 from __future__ import annotations
 
 import time
-from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -21,7 +20,7 @@ from tfm.gel import Gel, displacement, node_kernel
 from tfm.images.model import Outlines
 from tfm.traction.blocks import Blocks, make_blocks
 from tfm.traction.bounded import choose_step, solve, vector_data, whole_groups
-from tfm.traction.gaussian import LinearData, NormalEquations, Solution, nuisance_columns, response_matrix
+from tfm.traction.gaussian import LinearData, nuisance_columns, response_matrix
 from tfm.traction.lattice import Lattice, cover_outlines, image_lattice, make_nodes
 from tfm.traction.model import TractionField
 from tfm.traction.prior import CellPrior
@@ -141,7 +140,6 @@ def infer_image(
     most_coefficients: int = 1100,
     most_steps: int = 20,
     tolerance: float = 0.02,
-    lengths: Sequence[float] | None = None,
 ) -> TractionField:
     r"""Posterior of the traction inside the outlines, given the two bead images.
 
@@ -185,19 +183,17 @@ def infer_image(
     basis = make_nodes(covered, step=choose_step(covered, most=most_coefficients))
     groups, cut = whole_groups(covered)
     begin = vector_data(start, lattice, basis, covered, groups=groups, nuisance=nuisance)
-    options = {} if lengths is None else {"lengths": lengths}
-    priors: dict[float, tuple[CellPrior, ...]] = {}
+    priors: dict[tuple[str, float], tuple[CellPrior, ...]] = {}
     if previous is not None and previous.solution is not None and previous.data is not None and (
         previous.solution.mean.size == 2 * basis.size
     ):  # fmt: skip
         solution = previous.solution
         solution = replace(solution, nuisance=np.zeros_like(solution.nuisance))
     else:
-        solution, _ = solve(begin, gel, priors=priors, **options)
+        solution, _ = solve(begin, gel, priors=priors, tolerance=0.3)
     loop = _make_loop(relaxed, stressed, pixel_size, gel, lattice, b, covered, begin, start.drift)
     noise = NoiseModel(0.0, 1.0)
     functionals = _dipole_rows(begin)
-    normal: NormalEquations
     history: list[float] = []
     converged = False
     dipole = functionals @ solution.mean
@@ -212,12 +208,17 @@ def infer_image(
         if step_number <= 4:
             noise = fit_noise(terms, _quiet_pixels(loop, relaxed.shape))
         step = _linearise(loop, terms, solution.mean, solution.nuisance, robust=step_number > 2)
-        solution, normal = solve(step.data, gel, start=solution, response=loop.response, priors=priors, **options)
+        # The prior's strength follows roughly until the displacement has settled, then exactly, lengths included.
+        settled = step_number > 3 and history[-1] < 4.0 * tolerance
+        solution, _ = solve(
+            step.data, gel, start=solution.components, response=loop.response, priors=priors,
+            tolerance=0.03 if settled else 0.3, search=settled,
+        )  # fmt: skip
         new = functionals @ solution.mean
         sd = np.sqrt(np.einsum("ij,jk,ik->i", functionals, solution.covariance, functionals))
         history.append(float(np.max(np.abs(new - dipole) / sd)))
         dipole = new
-        if step_number > 4 and history[-1] < tolerance:
+        if settled and history[-1] < tolerance:
             converged = True
             break
     notes = list(start.notes)
@@ -233,7 +234,7 @@ def infer_image(
         "seconds": time.perf_counter() - began, "block_px": b,
     }  # fmt: skip
     return make_result(
-        step.data, gel, covered, solution, normal, method="image", misfit=step.misfit, cut=cut, notes=tuple(notes),
+        step.data, gel, covered, solution, method="image", misfit=step.misfit, cut=cut, notes=tuple(notes),
         statistics=statistics, offset_before=np.asarray(solution.nuisance[:2]),
     )  # fmt: skip
 

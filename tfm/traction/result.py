@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tfm.gel import Gel, displacement, node_kernel
-from tfm.traction.gaussian import LinearData, NormalEquations, Solution
+from tfm.traction.gaussian import LinearData, Solution
 from tfm.traction.model import Posterior, TractionField
 
 __all__ = ["lattice_traction", "make_result"]
@@ -29,20 +29,18 @@ def make_result(
     gel: Gel,
     covered: NDArray[np.int32],
     solution: Solution,
-    normal: NormalEquations,
     *,
     method: str,
-    misfit: float | None,
+    misfit: float,
     cut: tuple[int, ...],
     notes: tuple[str, ...] = (),
     statistics: Mapping[str, Any] | None = None,
     offset_before: NDArray[np.float64] | None = None,
 ) -> TractionField:
-    """The frozen record; ``misfit`` None takes the chi-square of the data per degree of freedom."""
+    """The frozen record of a Bayesian method."""
     traction = lattice_traction(data, solution.mean)
     lattice, basis = data.lattice, data.basis
     kernel = node_kernel(gel, lattice.shape, lattice.spacing, receiver="average")
-    chi = solution.chi_square / max(solution.degrees, 1.0)
     said = list(notes)
     if cut:
         names = ", ".join(str(c) for c in cut)
@@ -51,8 +49,11 @@ def make_result(
     if step_um > 3.0:
         said.append(f"nodes are {step_um:.1f} um apart, wider than adhesions: fine structure of the traction is not resolved")
     numbers = {
-        "amplitude_Pa": solution.amplitudes.tolist(), "length_um": solution.length * 1e6,
-        "length_profile": [[length * 1e6, value] for length, value in solution.profile],
+        "prior": [
+            {"shape": c.shape, "length_um": c.length * 1e6, "amplitude_Pa": c.amplitudes.tolist(), "log_evidence": c.log_evidence}
+            for c in solution.components
+        ],
+        "length_profile": [[shape, length * 1e6, value] for shape, length, value in solution.profile],
         "log_evidence": solution.log_evidence, "node_spacing_um": step_um, "coefficients": 2 * basis.size,
         "data": 2 * data.rows.size, "prior_iterations": solution.iterations, "nuisance": list(data.nuisance),
         "nuisance_values": solution.nuisance.tolist(), **(statistics or {}),
@@ -63,6 +64,6 @@ def make_result(
         Posterior(
             basis.weights, basis.rows, basis.columns, basis.labels, solution.mean, solution.covariance, solution.log_evidence
         ),
-        solution.nuisance[:2] if offset_before is None else offset_before, float(chi if misfit is None else misfit),
+        solution.nuisance[:2] if offset_before is None else offset_before, float(misfit),
         numbers, tuple(said), data=data, solution=solution,
     )  # fmt: skip

@@ -7,15 +7,14 @@ from numpy.typing import NDArray
 
 from tfm.errors import InputError
 from tfm.gel import Gel
-from tfm.traction.gaussian import Solution, normal_equations, posterior
+from tfm.traction.gaussian import Solution, fixed_posterior, normal_equations
 from tfm.traction.model import TractionField
-from tfm.traction.prior import make_prior
 
 __all__ = ["mean_with_gel", "solution_with_gel"]
 
 
 def solution_with_gel(traction: TractionField, gel: Gel) -> Solution:
-    """Posterior of the same data on another gel, with the same correlation length and a prior strength scaled with E.
+    """Posterior of the same data on another gel, with the same correlation lengths and a prior strength scaled with E.
 
     Raises
     ------
@@ -24,11 +23,12 @@ def solution_with_gel(traction: TractionField, gel: Gel) -> Solution:
     """
     if traction.data is None or traction.solution is None:
         raise InputError("this traction has no posterior", code="no-posterior", remedy="use the method bounded or image")
-    prior = make_prior(traction.data.basis, traction.data.lattice, length=traction.solution.length)
-    scale = gel.youngs_modulus / traction.gel.youngs_modulus
-    return posterior(
-        normal_equations(traction.data, gel), prior, traction.solution.amplitudes * scale, traction.solution.length
-    )[0]
+    return fixed_posterior(
+        traction.data,
+        normal_equations(traction.data, gel),
+        traction.solution.components,
+        amplitude_factor=gel.youngs_modulus / traction.gel.youngs_modulus,
+    )
 
 
 def mean_with_gel(traction: TractionField, gel: Gel) -> NDArray[np.float64]:
