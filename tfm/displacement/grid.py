@@ -58,8 +58,13 @@ def to_pixels(
     values: NDArray[np.floating], rows: NDArray[np.float32], columns: NDArray[np.float32]
 ) -> NDArray[np.float32]:
     """Values on nodes ``(..., ny, nx)`` at the pixels of two spline matrices: ``rows @ values @ columns.T``."""
-    out: NDArray[np.float32] = rows @ values.astype(np.float32) @ columns.T
-    return out
+    # One plain matrix product at a time: a stacked one with a transposed factor leaves the fast path.
+    parts = values.astype(np.float32).reshape(-1, *values.shape[-2:])
+    across = np.ascontiguousarray(columns.T)
+    out = np.empty((len(parts), rows.shape[0], columns.shape[0]), dtype=np.float32)
+    for part, target in zip(parts, out, strict=True):
+        np.matmul(rows @ part, across, out=target)
+    return out.reshape(*values.shape[:-2], *out.shape[1:])
 
 
 def fill_smoothly(values: NDArray[np.float64], valid: NDArray[np.bool_]) -> NDArray[np.float64]:

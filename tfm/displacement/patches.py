@@ -1,0 +1,168 @@
+"""Local polynomials through pixel information: displacement and covariance of every patch, all patches at once.
+
+Every pixel carries a 2x2 information matrix M and a vector h = M u (pixels, :mod:`tfm.displacement.information`). A patch
+fits a polynomial of order 1 or 2 to them by weighted least squares; its value at the node is the displacement. Sums
+over patches are separable, so they are products of small matrices and no loop over vectors exists. Weights fall as
+(1 - x^2/R^2)(1 - y^2/R^2): for a given blur no other window leaves less noise (Epanechnikov, Theory Probab. Appl.
+14:153, 1969), and patches two radii apart share no pixel.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["PatchSums", "Patches", "effective_area"]
+
+
+def effective_area(radius: float) -> float:
+    """Area (px^2) whose plain average is as noisy as the window's: (int W)^2 / int W^2 = (5/3 R)^2.
+
+    Examples
+    --------
+    >>> round(effective_area(19.2))
+    1024
+    """
+    return (5 * radius / 3) ** 2
+
+
+@dataclass(frozen=True)
+class Patches:
+    """Result of one patch size.
+
+    Attributes
+    ----------
+    u
+        ``(2, ny, nx)`` px; NaN where the patch cannot tell.
+    covariance
+        ``(3, ny, nx)`` px^2: xx, xy, yy.
+    valid
+        ``(ny, nx)`` bool.
+    misfit
+        ``(ny, nx)`` mean of squared residual over its expectation.
+    """
+
+    u: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    valid: NDArray[np.bool_]
+    misfit: NDArray[np.float64]
+
+
+@dataclass
+class PatchSums:
+    """Sums over patches of one radius and order, gathered strip by strip of the image.
+
+    Parameters
+    ----------
+    x, y
+        ``(nx,)``, ``(ny,)`` px, nodes.
+    shape
+        Of the image.
+    radius
+        px, half the window's edge.
+    order
+        1 (affine) or 2 (quadratic).
+    with_covariance
+        Whether to gather what the covariance needs; an iteration that only moves the field does without.
+    """
+
+    x: NDArray[np.float64]
+    y: NDArray[np.float64]
+    shape: tuple[int, int]
+    radius: float
+    order: int
+    with_covariance: bool = True
+    _sums: dict[tuple[str, int, int, int], NDArray[np.float32]] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        self._columns = _windows(self.x, np.arange(self.shape[1]), self.radius, 2 * self.order)
+
+    def add(
+        self,
+        first_row: int,
+        information: NDArray[np.float32],
+        pull: NDArray[np.float32],
+        scatter: NDArray[np.float32],
+        squares: NDArray[np.float32],
+    ) -> None:
+        """Take in one strip of the image.
+
+        Parameters
+        ----------
+        first_row
+            Row of the image where the strip starts.
+        information, scatter
+            ``(3, rows, columns)``: xx, xy, yy of M and of the variance of the pixel's score.
+        pull
+            ``(2, rows, columns)``: h.
+        squares
+            ``(2, rows, columns)``: squared residual, and its expectation.
+        """
+        rows = np.arange(first_row, first_row + information.shape[1])
+        near = np.flatnonzero((self.y > rows[0] - self.radius) & (self.y < rows[-1] + self.radius))
+        if not len(near):
+            return
+        window_y = _windows(self.y[near], rows, self.radius, 2 * self.order)
+        top = 2 * self.order
+        jobs = [("M", k, information[k], top, 1) for k in range(3)] + [("h", k, pull[k], self.order, 1) for k in range(2)]
+        if self.with_covariance:
+            jobs += [("V", k, scatter[k], top, 2) for k in range(3)] + [("r", k, squares[k], 0, 1) for k in range(2)]
+        for name, k, image, highest, power in jobs:
+            for j in range(highest + 1):
+                part = window_y[power][j] @ image
+                for i in range(highest + 1 - j):
+                    key = (name, k, i, j)
+                    if key not in self._sums:
+                        self._sums[key] = np.zeros((len(self.y), len(self.x)), dtype=np.float32)
+                    self._sums[key][near] += part @ self._columns[power][i].T
+
+    def solve(self, *, least_information: float = 4.0) -> Patches:
+        """Displacement and covariance of every patch.
+
+        A patch is valid when its weaker direction is known better than ``1 / sqrt(least_information)`` px.
+        """
+        terms = [(i, j) for degree in range(self.order + 1) for j in range(degree + 1) for i in [degree - j]]
+        shape = (len(self.y), len(self.x))
+        size, count = 2 * len(terms), shape[0] * shape[1]
+        normal, right = np.zeros((count, size, size)), np.zeros((count, size))
+        spread = np.zeros((count, size, size)) if self.with_covariance else normal
+        for a, (i, j) in enumerate(terms):
+            for c in range(2):
+                right[:, 2 * a + c] = self._sums["h", c, i, j].ravel()
+            for b, (k, m) in enumerate(terms):
+                for c in range(2):
+                    for d in range(2):
+                        normal[:, 2 * a + c, 2 * b + d] = self._sums["M", c + d, i + k, j + m].ravel()
+                        if self.with_covariance:
+                            spread[:, 2 * a + c, 2 * b + d] = self._sums["V", c + d, i + k, j + m].ravel()
+        # Parameters are in px at the window's edge (coordinates are scaled by R). The weak prior on the slopes (30 px at
+        # the edge) only keeps empty patches from dividing by nothing.
+        normal[:, np.arange(size), np.arange(size)] += 1e-3
+        # Noise can leave the sums of an empty patch without a positive diagonal: such a patch knows nothing.
+        ok = (normal[:, np.arange(size), np.arange(size)] > 2e-3).all(axis=1)
+        normal[~ok] = np.eye(size)
+        wanted = np.broadcast_to(np.eye(size, 2), (count, size, 2))
+        first = np.swapaxes(np.linalg.solve(normal, wanted), 1, 2)
+        u = np.squeeze(first @ right[..., None], -1).T.reshape(2, *shape)
+        cov = first @ spread @ np.swapaxes(first, 1, 2) if self.with_covariance else first[:, :, :2]
+        trace, det = cov[:, 0, 0] + cov[:, 1, 1], cov[:, 0, 0] * cov[:, 1, 1] - cov[:, 0, 1] ** 2
+        worst = 0.5 * trace + np.sqrt(np.maximum(0.25 * trace**2 - det, 0))
+        ok &= (det > 0) & (worst < 1 / least_information)
+        valid = ok.reshape(shape)
+        covariance = np.stack([cov[:, 0, 0], cov[:, 0, 1], cov[:, 1, 1]]).reshape(3, *shape)
+        misfit = np.full(shape, np.nan)
+        if self.with_covariance:
+            got, due = self._sums["r", 0, 0, 0], self._sums["r", 1, 0, 0]
+            misfit = np.divide(got, due, out=misfit, where=due > 0).astype(np.float64)
+        return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit)
+
+
+def _windows(
+    nodes: NDArray[np.float64], places: NDArray[np.int_], radius: float, highest: int
+) -> dict[int, list[NDArray[np.float32]]]:
+    """Window times powers of the scaled coordinate, ``(nodes, places)``, for the window (1) and its square (2)."""
+    t = (places[None, :] - nodes[:, None]) / radius
+    window = np.clip(1 - t**2, 0, None)
+    return {power: [np.asarray(window**power * t**p, dtype=np.float32) for p in range(highest + 1)] for power in (1, 2)}

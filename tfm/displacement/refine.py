@@ -1,0 +1,221 @@
+"""Displacement at the limit of the photons: iterated patch matching with local deformation on every node at once."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.ndimage import gaussian_filter, spline_filter
+
+from tfm.displacement.grid import fill_smoothly, node_axis, spline_matrix, to_pixels
+from tfm.displacement.information import HALO, FramePair, strip_information
+from tfm.displacement.match import BrightnessSums
+from tfm.displacement.noise import camera_noise
+from tfm.displacement.patches import Patches, PatchSums, effective_area
+from tfm.displacement.piv import PivField
+from tfm.displacement.prepare import PreparedFrame, bead_width
+
+__all__ = ["RefinedField", "refine_displacement"]
+
+#: Residual, in standard deviations over a bead, beyond which a bead counts as lost or added.
+_REJECT = 6.0
+
+
+@dataclass(frozen=True)
+class RefinedField:
+    """Displacement and covariance on the nodes, in pixels.
+
+    Attributes
+    ----------
+    x, y
+        ``(nx,)``, ``(ny,)`` px in the relaxed frame.
+    u
+        ``(2, ny, nx)`` px, drift included; NaN where not valid.
+    covariance
+        ``(3, ny, nx)`` px^2: xx, xy, yy; NaN where not valid.
+    valid
+        ``(ny, nx)`` bool.
+    area
+        ``(ny, nx)`` px^2, ground per independent vector at that node.
+    misfit
+        ``(ny, nx)`` mean squared residual over its expectation.
+    variance
+        ``(c0, c1)`` of the camera: variance = c0 + c1 * counts.
+    lost
+        Share of the pixels in beads that one frame has and the other has not.
+    settings
+        For run.json.
+    """
+
+    x: NDArray[np.float64]
+    y: NDArray[np.float64]
+    u: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    valid: NDArray[np.bool_]
+    area: NDArray[np.float64]
+    misfit: NDArray[np.float64]
+    variance: tuple[float, float]
+    lost: float
+    settings: Mapping[str, Any]
+
+
+@dataclass(frozen=True)
+class _Nodes:
+    x: NDArray[np.float64]
+    y: NDArray[np.float64]
+    u: NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class _Sweep:
+    """What one walk over the image brings home."""
+
+    patches: list[Patches]
+    variance: tuple[float, float]
+    gain: NDArray[np.float32]
+    offset: NDArray[np.float32]
+    lost: float
+
+
+def refine_displacement(
+    relaxed: PreparedFrame,
+    stressed: PreparedFrame,
+    start: PivField,
+    *,
+    spacing_px: int = 8,
+    radius: float = 19.2,
+    quiet: NDArray[np.bool_] | None = None,
+    most_iterations: int = 8,
+) -> RefinedField:
+    """Refine ``start`` until it stops moving, then choose the patch at every node.
+
+    Each iteration brings the stressed frame back with the present field, gathers the information of every pixel and
+    fits local polynomials to it (subset matching with local deformation; Sutton, Orteu & Schreier, Image Correlation,
+    Springer 2009, ch. 5, solved for all subsets in one step). Camera noise and brightness are measured from the residuals
+    on the way. Last, every node takes from three windows (affine; quadratic and wide; quadratic) the one of least
+    expected squared error, variance plus squared blur.
+    """
+    shape = relaxed.image.shape
+    x, y = node_axis(shape[1], spacing_px), node_axis(shape[0], spacing_px)
+    nodes = _Nodes(start.x, start.y, fill_smoothly(start.u, start.valid))
+    dark = relaxed.image[::3, ::3]
+    variance = (float((1.4826 * np.median(np.abs(dark - np.median(dark)))) ** 2) + 1e-12, 0.0)
+    ones, zeros = np.ones(shape, dtype=np.float32), np.zeros(shape, dtype=np.float32)
+    pair = FramePair(relaxed.image, spline_filter(stressed.image, 3, output=np.float32), relaxed.background,
+                     stressed.background, relaxed.usable, stressed.usable, ones, zeros, variance,
+                     _shared_width(relaxed, stressed))  # fmt: skip
+    moves: list[float] = []
+    for k in range(most_iterations):
+        sweep = _sweep(pair, nodes, [(x, y, 1.25 * radius, 2)], np.inf, quiet, with_covariance=False)
+        new = _Nodes(x, y, fill_smoothly(sweep.patches[0].u, sweep.patches[0].valid))
+        moves.append(_largest_move(nodes, new))
+        nodes = new
+        pair = replace(pair, variance=sweep.variance, gain=sweep.gain, offset=sweep.offset)
+        if k >= 1 and moves[-1] < 0.05:
+            break
+    windows = [(x, y, radius, 1), (x, y, 1.25 * radius, 2), (x, y, radius, 2)]
+    last = _sweep(pair, nodes, windows, _REJECT, quiet, with_covariance=True)
+    chosen = _choose(last.patches, [effective_area(radius), _quadratic_area(1.25 * radius), _quadratic_area(radius)])
+    settings = {
+        "refinement": "patches with local deformation",
+        "window_radius_px": [radius, 1.25 * radius, radius],
+        "window_order": [1, 2, 2],
+        "iterations": len(moves) + 1,
+        "last_move_px": moves[-1],
+        "camera_noise": list(last.variance),
+        "lost_share": last.lost,
+    }
+    u, covariance, valid, area, misfit = chosen
+    return RefinedField(x, y, u, covariance, valid, area, misfit, last.variance, last.lost, settings)
+
+
+def _shared_width(relaxed: PreparedFrame, stressed: PreparedFrame) -> float:
+    widths = [bead_width(frame.image, frame.usable) for frame in (relaxed, stressed)]
+    return float(np.mean(widths)) if np.isfinite(widths).all() else 0.0
+
+
+def _quadratic_area(radius: float) -> float:
+    # The value at the centre of a quadratic patch is as noisy as an average over a smaller area; for this window the ratio
+    # of variances (uniform information) is 2.25.
+    return effective_area(radius) / 2.25
+
+
+def _sweep(
+    pair: FramePair,
+    nodes: _Nodes,
+    windows: list[tuple[NDArray[np.float64], NDArray[np.float64], float, int]],
+    reject: float,
+    quiet: NDArray[np.bool_] | None,
+    *,
+    with_covariance: bool,
+) -> _Sweep:
+    height, width = pair.relaxed.shape
+    sums = [PatchSums(wx, wy, (height, width), radius, order, with_covariance) for wx, wy, radius, order in windows]
+    brightness = BrightnessSums((height, width))
+    columns = spline_matrix(nodes.x, np.arange(width))
+    samples: list[NDArray[np.float32]] = []
+    lost = used = 0
+    thin = max(1, int(np.sqrt(height * width / 250_000)))
+    for block in range(len(brightness.rows) - 1):
+        first, last = int(brightness.rows[block]), int(brightness.rows[block + 1])
+        rows = np.arange(max(0, first - HALO), min(height, last + HALO))
+        u = to_pixels(nodes.u, spline_matrix(nodes.y, rows), columns)
+        strip = strip_information(pair, u, first, last, reject=reject, final=with_covariance)
+        for part in sums:
+            part.add(first, strip.information, strip.pull, strip.scatter, strip.squares)
+        brightness.add(block, strip.relaxed, strip.warped, strip.used)
+        lost += strip.lost
+        used += int(strip.used.sum())
+        ground = strip.used if quiet is None else strip.used & quiet[first:last]
+        pick = ground[::thin, ::thin]
+        samples.append(
+            np.stack([part[::thin, ::thin][pick] for part in (strip.residual, strip.units, strip.level)])
+        )
+    residual, units, level = np.concatenate(samples, axis=1)
+    variance = camera_noise(residual, units, level) if residual.size > 2000 else pair.variance
+    gain, offset = brightness.maps()
+    return _Sweep([part.solve() for part in sums], variance, gain * pair.gain, offset * pair.gain + pair.offset,
+                  lost / max(1, used + lost))  # fmt: skip
+
+
+def _largest_move(before: _Nodes, now: _Nodes) -> float:
+    old = to_pixels(before.u, spline_matrix(before.y, now.y), spline_matrix(before.x, now.x))
+    return float(np.quantile(np.hypot(*(now.u - old)), 0.99))
+
+
+def _choose(
+    patches: list[Patches], areas: list[float]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.bool_], NDArray[np.float64], NDArray[np.float64]]:
+    """At every node the window of least variance plus squared blur; the blur is measured against the last window."""
+    sharp = patches[-1]
+    best = np.full(sharp.valid.shape, np.inf)
+    u, covariance = np.full_like(sharp.u, np.nan), np.full_like(sharp.covariance, np.nan)
+    area, misfit = np.full_like(best, np.nan), np.full_like(best, np.nan)
+    for patch, own in zip(patches, areas, strict=True):
+        blur = _squared_blur(patch, sharp) if patch is not sharp else np.zeros_like(best)
+        total = np.where(patch.valid, patch.covariance[0] + patch.covariance[2] + blur, np.inf)
+        better = total < best
+        best = np.where(better, total, best)
+        u = np.where(better, patch.u, u)
+        widened = patch.covariance + 0.5 * blur * np.array([1.0, 0.0, 1.0])[:, None, None]
+        # Residuals above their expectation say that more than noise is at work: the variance grows with them.
+        widened *= np.maximum(1, patch.misfit)
+        covariance = np.where(better, widened, covariance)
+        area, misfit = np.where(better, own, area), np.where(better, patch.misfit, misfit)
+    valid = np.isfinite(best) & (misfit < 3)
+    return np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, area, misfit
+
+
+def _squared_blur(patch: Patches, sharp: Patches) -> NDArray[np.float64]:
+    """Squared difference to the sharp window beyond what noise explains, averaged over neighbours; never below 0."""
+    both = patch.valid & sharp.valid
+    trace = sharp.covariance[0] + sharp.covariance[2] - patch.covariance[0] - patch.covariance[2]
+    excess = np.where(both, ((patch.u - sharp.u) ** 2).sum(axis=0) - trace, 0.0)
+    share = gaussian_filter(both.astype(float), 1.0)
+    mean = gaussian_filter(excess, 1.0) / np.maximum(share, 1e-3)
+    noise = gaussian_filter(np.where(both, np.abs(trace), 0.0), 1.0) / np.maximum(share, 1e-3)
+    # Chance alone makes the mean of excess scatter by about half of the noise term; what does not rise above it is no blur.
+    return np.where(mean > 0.6 * noise, mean, 0.0)
