@@ -12,6 +12,8 @@ __all__ = ["ImageFault", "image_faults"]
 
 #: Share of saturated pixels above which bead positions suffer; one bead in a hundred at 0.02 beads per px^2.
 SATURATED_SHARE = 0.002
+#: Pixels at a frame's own maximum that chance does not explain.
+_PILE = 20
 
 
 @dataclass(frozen=True)
@@ -59,9 +61,10 @@ def image_faults(frame: NDArray[Any], *, saturation_level: float | None = None) 
     if low == high:
         faults.append(ImageFault("constant-image", f"all pixels have the value {high:g}: nothing was imaged", True))
         return tuple(faults)
-    share = float(np.mean(good == high))
+    at_top = int(np.count_nonzero(good == high))
+    share = at_top / good.size if at_top > _PILE else 0.0
     if saturation_level is not None:
-        share = max(share if share > SATURATED_SHARE else 0.0, float(np.mean(good >= saturation_level)))
+        share = max(share, float(np.mean(good >= saturation_level)))
     levels = np.unique(good[:: max(1, good.size // 100_000)]).size
     if levels < 8:
         faults.append(ImageFault("few-levels", f"the frame has only {levels} different grey values", False))

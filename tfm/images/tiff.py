@@ -219,9 +219,10 @@ def _planes(name: str, tif: Any, series: Any, max_pixels: int) -> TiffPlanes:
             file=name,
             remedy=RESAVE,
         )
-    if math.prod(key.shape) > max_pixels:
+    largest = max(math.prod(key.shape), math.prod(key.chunks))
+    if largest > max_pixels:
         raise MeasurementError(
-            f"one page claims {math.prod(key.shape)} pixels",
+            f"one page or tile claims {largest} pixels",
             code="too-large",
             file=name,
             remedy="save every plane as a page of its own",
