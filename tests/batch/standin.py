@@ -2,7 +2,8 @@
 
 What a field does follows from its name: ``die`` kills its worker, ``dieonce`` does so the first time only, ``bug`` raises
 an error that nobody expects, ``bugonce`` does so the first time only, ``bad`` cannot be measured, ``hang`` stands still,
-``slow`` takes a while.
+``deaf`` does so and cannot be
+woken, ``slow`` takes a while.
 """
 
 from __future__ import annotations
@@ -58,6 +59,9 @@ def _misbehave(name: str, results: Path) -> None:
         raise ZeroDivisionError("nobody expected this")
     if word == "bad":
         raise MeasurementError("no bead is in focus", code="no-beads", remedy="focus on the beads")
+    if word == "deaf":
+        signal.pthread_sigmask(signal.SIG_BLOCK, [signal.SIGALRM])
+        time.sleep(60)
     if word == "hang":
         time.sleep(60)
     if word == "slow":

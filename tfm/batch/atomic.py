@@ -19,6 +19,7 @@ from pathlib import Path
 from tfm.errors import TfmError
 
 __all__ = [
+    "LOCK_NAME",
     "StorageError",
     "atomic_file",
     "file_sha256",
@@ -28,6 +29,8 @@ __all__ = [
     "write_text",
 ]
 
+#: The lock file of a results folder; it is there before any table, so it also marks the folder as ours.
+LOCK_NAME = ".tfm-lock"
 _TEMPORARY = ".tfm-tmp-"
 _CHUNK = 1 << 20
 #: Seconds after which a temporary file of another machine counts as abandoned.
@@ -170,7 +173,7 @@ def remove_leftovers(folder: Path) -> int:
 @contextmanager
 def folder_lock(folder: Path) -> Iterator[None]:
     """Hold the folder's lock, which the kernel releases when the process ends in whatever way."""
-    path = folder / ".tfm-lock"
+    path = folder / LOCK_NAME
     with storage_guard(path):
         stream = path.open("a")
     with stream:

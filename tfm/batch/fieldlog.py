@@ -89,13 +89,17 @@ def time_limit(seconds: float | None) -> Iterator[Callable[[], None]]:
     def ring(number: int, frame: FrameType | None) -> None:
         raise TimeLimitError
 
+    over = False
+
     def again() -> None:
-        signal.setitimer(signal.ITIMER_REAL, seconds)
+        if not over:  # an alarm set after the handler is gone would end the process
+            signal.setitimer(signal.ITIMER_REAL, seconds)
 
     before = signal.signal(signal.SIGALRM, ring)
     again()
     try:
         yield again
     finally:
+        over = True
         signal.setitimer(signal.ITIMER_REAL, 0)
         signal.signal(signal.SIGALRM, before)

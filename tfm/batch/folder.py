@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
-from tfm.batch.atomic import remove_leftovers, storage_guard
+from tfm.batch.atomic import LOCK_NAME, remove_leftovers, storage_guard
 from tfm.batch.schema import TABLES
 from tfm.batch.sheet import Sheet
 from tfm.batch.store import Store
@@ -35,7 +35,7 @@ def prepare_folder(out: Path, sheet: Sheet) -> Store:
                 remedy="choose another folder for the results",
             )
         strange = [name for name in sorted(names) if (out / name).exists()] if out.is_dir() else []
-        if strange and not (out / "run.json").exists():
+        if strange and not any((out / mark).exists() for mark in ("run.json", LOCK_NAME)):
             raise InputError(
                 f"holds '{strange[0]}' that no run has written",
                 code="would-overwrite",

@@ -162,9 +162,9 @@ class _Pool:
         if not broken:
             return
         broken += [task for task, _ in self.running.values()]
-        self.running.clear()
         was_alone = self.alone
         self._stop()
+        self.running.clear()
         if was_alone:
             for task in broken:
                 text = "its worker process died twice (killed, perhaps for memory); run this field on a larger machine"
@@ -184,8 +184,8 @@ class _Pool:
             return
         names = {future for future, _ in hung}
         others = [task for future, (task, _) in self.running.items() if future not in names]
-        self.running.clear()
         self._stop()
+        self.running.clear()
         self.waiting.extendleft(others)
         for _, task in hung:
             yield _lost(task, f"gave up after {task.limit:g} s without progress; see --timeout", "timeout", 1)
