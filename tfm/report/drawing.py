@@ -4,15 +4,16 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from dataclasses import field as dataclass_field
 from pathlib import Path
 from typing import Any
 
 from matplotlib.figure import Figure
 
 from tfm.batch.atomic import file_sha256
-from tfm.report.checks import beads_figure, residual_figure
+from tfm.report.checks import beads_figure, residual_figure, unexplained_ground
 from tfm.report.fielddata import FieldArrays, read_arrays
 from tfm.report.figures import maps_figure, rows_of_frame
 from tfm.report.files import svg_text, thumbnail, write_bytes
@@ -24,7 +25,7 @@ from tfm.report.words import alt_maps, cell_sentence, plain
 __all__ = ["DRAWING_VERSION", "Picture", "Pictures", "draw_field", "strongest_frame"]
 
 #: Raise when figures change, so that pictures of earlier versions are drawn anew.
-DRAWING_VERSION = 1
+DRAWING_VERSION = 3
 
 
 @dataclass(frozen=True)
@@ -41,12 +42,16 @@ class Picture:
 
 @dataclass(frozen=True)
 class Pictures:
-    """What was drawn of a field: the frame shown, the vector files, the thumbnail's name, the arrays' hash."""
+    """What was drawn of a field: the frame shown, vector files, the thumbnail's name, the arrays' hash.
+
+    ``measures`` are numbers that only the arrays tell, by the names of :data:`tfm.report.triage.LIMITS`.
+    """
 
     frame: int
     pictures: tuple[Picture, ...]
     thumb: str | None
     sha256: str
+    measures: Mapping[str, float] = dataclass_field(default_factory=dict)
 
 
 def strongest_frame(field: FieldResult) -> int:
@@ -92,7 +97,9 @@ _CAPTIONS = {
     "residual": (
         "What the traction does not explain",
         "Observed minus predicted. A good field is even noise without structure. Structure outside the outline means a "
-        "wrong gel or a cell that is not outlined; inside, traction finer than the lattice, or lost focus.",
+        "wrong gel or a cell that is not outlined. Vectors are means over windows and blurred where the gel moves "
+        "steeply under a cell; the picture on the right is not: structure there is traction finer than the lattice, or "
+        "lost focus.",
     ),
     "numbers": (
         "Numbers behind the picture",
@@ -151,7 +158,8 @@ def draw_field(root: Path, field: FieldResult, *, redo: bool = False) -> Picture
     if not redo and stamp.exists():
         old: dict[str, Any] = json.loads(stamp.read_text(encoding="utf-8"))
         if old.get("state") == state and all((folder / p["file"]).exists() for p in old["pictures"]):
-            return Pictures(old["frame"], tuple(Picture(**p) for p in old["pictures"]), old["thumb"], digest)
+            drawn_before = tuple(Picture(**p) for p in old["pictures"])
+            return Pictures(old["frame"], drawn_before, old["thumb"], digest, old["measures"])
     frame = strongest_frame(field)
     arrays = read_arrays(field.data, frame=frame) if field.data is not None else FieldArrays(frame=frame, frames=1)
     pictures = []
@@ -167,7 +175,15 @@ def draw_field(root: Path, field: FieldResult, *, redo: bool = False) -> Picture
     small = thumbnail(arrays)
     if small is not None:
         write_bytes(folder / "thumb.webp", small)
-    drawn = Pictures(frame, tuple(pictures), "thumb.webp" if small is not None else None, digest)
-    about = {"state": state, "frame": frame, "thumb": drawn.thumb, "pictures": [vars(p) for p in pictures]}
+    share = unexplained_ground(field, arrays)
+    measures = {} if share is None else {"unexplained ground": round(share, 3)}
+    drawn = Pictures(frame, tuple(pictures), "thumb.webp" if small is not None else None, digest, measures)
+    about = {
+        "state": state,
+        "frame": frame,
+        "thumb": drawn.thumb,
+        "measures": measures,
+        "pictures": [vars(p) for p in pictures],
+    }
     write_bytes(stamp, (json.dumps(about, indent=1) + "\n").encode())
     return drawn

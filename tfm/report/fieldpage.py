@@ -86,6 +86,12 @@ def _measurement(field: FieldResult, frame: int) -> list[tuple[str, str]]:
     seconds = record.get("seconds")
     if isinstance(seconds, Mapping) and isinstance(seconds.get("all"), int | float):
         found.append(("time taken", f"{seconds['all']:.1f} s"))
+    return found
+
+
+def _provenance(record: Mapping[str, Any]) -> list[tuple[str, str]]:
+    """Settings, versions and hashes: what is needed to get the same numbers again."""
+    found = []
     parts = record.get("parts") or {}
     for words, values in (("setting", parts.get("settings")), ("version", record.get("versions"))):
         if isinstance(values, Mapping):
@@ -137,5 +143,9 @@ def field_context(field: FieldResult, pictures: Pictures, meanings: Mapping[str,
         "budget_columns": [BUDGET_WORDS.get(k, (k, "", ""))[0] for k in sources],
         "budget_rows": [(f"cell {n}", [f"{100 * p.get(k, 0.0):.1f} %" for k in sources]) for n, p in shares.items()],
         "gel": _gel(field.gel) if field.gel is not None else [],
-        "measurement": _measurement(field, pictures.frame),
+        "measurement": [
+            *_measurement(field, pictures.frame),
+            *((f"{k}, %", plain(v)) for k, v in pictures.measures.items()),
+        ],
+        "provenance": _provenance(field.record),
     }

@@ -50,11 +50,11 @@ def tensor(row: Row) -> tuple[Array, Array, Array | None] | None:
 
 
 def dipole_scale(rows: Sequence[Row], width: float) -> float:
-    """m of half axis per N m such that the largest principal value spans a sixth of ``width`` (m), rounded down."""
+    """m of half axis per N m such that the largest principal value spans at most a fifth of ``width`` (m)."""
     largest = max((abs(number(r, "major_pNm") or 0.0) for r in rows), default=0.0)
     if largest == 0.0:
         return 0.0
-    return plots.round_length(width * 1e6 / 6 / largest) * 1e-6 / PN_M
+    return plots.round_length(width * 1e6 / 5 / largest) * 1e-6 / PN_M
 
 
 def _draw_cells(ax: Axes, rows: Sequence[Row], width: float) -> None:
@@ -99,6 +99,6 @@ def maps_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
         panels.bar(1, shown, "traction, kPa")
         if a.labels is not None and (a.labels > 0).any():
             made = plots.draw_contraction(panels.axes[2], a.xt, a.yt, a.traction, a.labels)
-            panels.bar(2, made, "nN/µm; positive pulls towards the centroid, negative pushes")
+            panels.bar(2, made, "nN/µm, positive towards the centroid")
     _draw_cells(panels.axes[2], rows_of_frame(field.cells, a.frame), limits[0][1] - limits[0][0])
     return panels.finish(["#ffffff", INK, INK])

@@ -48,7 +48,8 @@ def _draw_half(ax: Axes, centre: Array, tip: Array, *, inwards: bool, colours: t
             [centre[0], tip[0]], [centre[1], tip[1]], color=shade, lw=width, solid_capstyle="butt", zorder=5.5
         )
         drawn += line
-    if float(np.hypot(*(tip - centre))) > 0:
+    reach = float(np.hypot(*(tip - centre)))
+    if reach > 0.035 * abs(float(np.subtract(*ax.get_xlim()))):  # a head longer than its axis would tell a lie
         start, end = (tip, tip + 0.45 * (centre - tip)) if inwards else (centre, tip)
         style = {"arrowstyle": "-|>", "facecolor": colours[0], "edgecolor": colours[1], "lw": 0.6}
         style |= {"mutation_scale": 10, "shrinkA": 0, "shrinkB": 0}

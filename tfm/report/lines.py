@@ -23,7 +23,7 @@ def group_line(group: Group, fields: Sequence[FieldResult]) -> dict[str, Any]:
     errors = [100 * c.sd / abs(c.value) for c in group.cells if c.sd is not None and c.value]
     interval = f" ({plain(group.low)} to {plain(group.high)})" if group.low is not None else ""
     count = {s: sum(f.status == s for f in mine) for s in ("ok", "caution", "failed")}
-    error = f"{median(errors):.2g} %" if errors else "—"
+    error = f"{plain(median(errors), 2)} %" if errors else "—"
     return {
         "name": group.condition,
         **count,

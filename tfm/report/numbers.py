@@ -14,6 +14,7 @@ from tfm.report.fielddata import FieldArrays
 from tfm.report.figures import rows_of_frame
 from tfm.report.results import FieldResult, Row, number
 from tfm.report.style import INK, LINE, QUIET, new_figure
+from tfm.report.words import with_error
 
 __all__ = [
     "BUDGET_WORDS",
@@ -174,12 +175,12 @@ def draw_links(ax: Axes, field: FieldResult, frame: int) -> None:
             ls="-" if energy < 0 else (0, (2, 1.2)),
             zorder=2,
         )
-        text = f"{energy:+.3g}" + (f" ± {sd:.2g}" if sd is not None else "") + " fJ"
+        text = with_error(energy, sd).replace("-", "−") + " fJ"
         if len(rows) <= 6:
             ax.annotate(
                 text,
                 ((ax0 + bx0) / 2, (ay0 + by0) / 2),
-                (0, 7),
+                (0, 15),
                 textcoords="offset points",
                 ha="center",
                 fontsize=8.5,

@@ -25,7 +25,7 @@ def draw_moments(ax: Axes, groups: Sequence[Group], *, links: bool = False) -> N
         cells = sorted(group.cells, key=lambda c: c.value)
         high = 0.36 if len(cells) > 1 else 0.0
         rows = band + np.linspace(high, -high, len(cells))
-        if group.low is not None and group.high is not None:
+        if group.low is not None and group.high is not None and len(cells) > 2:
             ax.fill_betweenx([band - 0.45, band + 0.45], group.low, group.high, color=LINE, alpha=0.16, lw=0)
         ax.plot([group.mean, group.mean], [band - 0.45, band + 0.45], color=LINE, lw=2.0, zorder=2)
         reach = np.array([1.96 * (c.sd or 0.0) for c in cells])

@@ -25,7 +25,7 @@ from tfm.report.words import plain
 __all__ = ["build_report"]
 
 _COLUMNS = (
-    ("field", "Field", False),
+    ("field", "Field and notes", False),
     ("status", "Status", False),
     ("condition", "Condition", False),
     ("cells", "Cells", True),
@@ -36,9 +36,8 @@ _COLUMNS = (
     ("misfit", "Misfit", True),
     ("noise", "Noise, nm", True),
     ("gel", "Gel", False),
-    ("notes", "Notes", False),
 )
-_WIDE = ("cells", "axis", "energy", "misfit", "noise", "gel", "notes")
+_WIDE = ("cells", "axis", "energy", "misfit", "noise", "gel")
 _NUMERIC = (
     ("moment", "Contractile moment, pN m"),
     ("error", "Error of the moment, %"),
@@ -92,7 +91,11 @@ def build_report(results_dir: Path, *, redo: bool = False) -> Path:
             "before": results.fields[i - 1] if i else None,
             "after": results.fields[i + 1] if i + 1 < len(results.fields) else None,
         }
-        text = page.render(field_context(field, drawn[field.name], results.columns), issues=findings(field), **around)
+        text = page.render(
+            field_context(field, drawn[field.name], results.columns),
+            issues=findings(field, drawn[field.name].measures),
+            **around,
+        )
         write_bytes(root / "figures" / field.folder / "index.html", text.encode())
     return write_bytes(root / "report.html", _index(results, drawn, environment, css).encode())
 
@@ -120,7 +123,7 @@ def _index(results: Results, drawn: Mapping[str, Pictures], environment: Environ
         method=_setting(results.run, "method"),
         version=_version(results.run),
         state_sentence=_state_sentence(results, drawn, len(excluded)),
-        look=first_look(results.fields),
+        look=first_look(results.fields, {n: p.measures for n, p in drawn.items()}),
         verdict=verdict_sentence(groups, found),
         comparisons=found,
         moments_alt=_moments_alt(groups),

@@ -175,7 +175,7 @@ def draw_traction(
     traction: ArrayLike,
     labels: ArrayLike | None = None,
     *,
-    arrows: int = 30,
+    arrows: int = 22,
     key: bool = True,
 ) -> AxesImage:
     """Size of the traction as colour, its direction as arrows, outlines on top; ground without traction stays blank.
@@ -190,7 +190,7 @@ def draw_traction(
     shown = ax.imshow(
         np.ma.masked_array(size / 1e3, blank), cmap=TRACTION_MAP, vmin=0, vmax=top, extent=extent_of(xs, ys), zorder=1
     )
-    inside = ~blank & (size > 0.08 * top * 1e3)
+    inside = ~blank & (size > 0.15 * top * 1e3)
     if inside.any():
         rows, columns = np.nonzero(~blank)
         span = max(np.ptp(rows), np.ptp(columns)) + 1

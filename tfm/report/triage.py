@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from types import MappingProxyType
 
 from tfm.report.results import FieldResult, number
 
@@ -18,7 +19,7 @@ class Limit:
     limit: float
     unit: str
     reason: str
-    read: Callable[[FieldResult], float | None]
+    read: Callable[[FieldResult, Mapping[str, float]], float | None]
 
 
 @dataclass(frozen=True)
@@ -67,29 +68,45 @@ def _drift(field: FieldResult) -> float | None:
     return max(sizes, default=None)
 
 
+_NONE: Mapping[str, float] = MappingProxyType({})
+_NONE_OF_ALL: Mapping[str, Mapping[str, float]] = MappingProxyType({})
+
 #: The limits that this page applies; they decide what is listed first and change no status and no number.
 LIMITS: tuple[Limit, ...] = (
+    Limit(
+        "unexplained ground",
+        0.5,
+        "%",
+        "something pulls outside the outlines (a cell that is not outlined?), or the gel is not the one entered",
+        lambda _, m: m.get("unexplained ground"),
+    ),
     Limit(
         "misfit",
         1.5,
         "",
         "the traction does not explain the displacement: outline, gel or focus is off",
-        lambda f: _largest(f, "misfit"),
+        lambda f, _: _largest(f, "misfit"),
     ),
     Limit(
         "peak strain",
         0.2,
         "",
         "beyond small strain the gel is no longer linear",
-        lambda f: number(f.gel, "strain_peak"),
+        lambda f, _: number(f.gel, "strain_peak"),
     ),
-    Limit("vectors rejected", 20.0, "%", "too many beads lost between the frames: focus or bleaching", _rejected),
-    Limit("error of the moment", 50.0, "%", "the 95 % interval includes zero", relative_error),
-    Limit("drift", 40.0, "px", "a large shift between the frames: was the dish moved?", _drift),
+    Limit(
+        "vectors rejected",
+        20.0,
+        "%",
+        "too many beads lost between the frames: focus or bleaching",
+        lambda f, _: _rejected(f),
+    ),
+    Limit("error of the moment", 50.0, "%", "the 95 % interval includes zero", lambda f, _: relative_error(f)),
+    Limit("drift", 40.0, "px", "a large shift between the frames: was the dish moved?", lambda f, _: _drift(f)),
 )
 
 
-def findings(field: FieldResult) -> list[Finding]:
+def findings(field: FieldResult, measures: Mapping[str, float] = _NONE) -> list[Finding]:
     """Everything wrong with one field, worst first; empty for a field that is plainly good."""
     if field.status == "unfinished":
         return [
@@ -106,7 +123,7 @@ def findings(field: FieldResult) -> list[Finding]:
         return [Finding(field, "result", "none", "one", field.message or "no message was left", 1e9)]
     found = []
     for limit in LIMITS:
-        value = limit.read(field)
+        value = limit.read(field, measures)
         if value is not None and value > limit.limit:
             unit = f" {limit.unit}" if limit.unit else ""
             reason = _said(field, limit.measure) or limit.reason
@@ -117,7 +134,16 @@ def findings(field: FieldResult) -> list[Finding]:
             )
     found += _gel_findings(field)
     if not found and field.status == "caution":
-        found.append(Finding(field, "notes", str(field.message.count("; ") + 1), "0", field.message, 0.5))
+        found.append(
+            Finding(
+                field,
+                "note of the run",
+                "1" if "; " not in field.message else str(field.message.count("; ") + 1),
+                "none",
+                field.message,
+                0.5,
+            )
+        )
     return sorted(found, key=lambda f: -f.weight)
 
 
@@ -138,7 +164,10 @@ def _gel_findings(field: FieldResult) -> list[Finding]:
     return [Finding(field, "gel", gel["verdict"], "agrees", reason, weight)]
 
 
-def first_look(fields: Sequence[FieldResult]) -> list[Finding]:
+def first_look(
+    fields: Sequence[FieldResult], measures: Mapping[str, Mapping[str, float]] = _NONE_OF_ALL
+) -> list[Finding]:
     """The worst finding of every field that has one, worst field first, sheet order among equals."""
-    worst = [f[0] for f in map(findings, fields) if f]
+    found = [findings(f, measures.get(f.name, _NONE)) for f in fields]
+    worst = [f[0] for f in found if f]
     return sorted(worst, key=lambda f: (-f.weight, f.field.position))
