@@ -36,7 +36,7 @@ def panels(edges, count=40):
 
 
 def weighted_real(gel, sigma):
-    """Integrals of (G_xx + G_yy) w and (G_xx - G_yy) (x^2 - y^2) w with w = exp(-r^2 / 2 sigma^2), in polar coordinates."""
+    """Integrals of (G_xx + G_yy) w and (G_xx - G_yy) (x^2 - y^2) w with w = exp(-r^2 / 2 sigma^2)."""
     r, weight = panels(sigma * np.array([0.0, 0.01, 0.1, 0.5, 1.0, 2.0, 4.0, 6.0, 9.0, 12.0]))
     g = surface_tensor(gel, r, 0.0)
     gauss = weight * np.exp(-0.5 * (r / sigma) ** 2)
@@ -46,7 +46,7 @@ def weighted_real(gel, sigma):
 
 def weighted_fourier(response, sigma):
     """The same through the transforms 2 pi sigma^2 exp(-k^2 sigma^2 / 2) and -(k_x^2 - k_y^2) sigma^4 times that."""
-    k, weight = panels(np.array([0.0, 0.7, 2.0, 4.0, 9.0]) / sigma, 24)
+    k, weight = panels(np.array([0.0, 0.05, 0.2, 0.7, 2.0, 4.0, 9.0]) / sigma, 18)
     g_l, g_t = response(k)
     gauss = weight * 2 * np.pi * sigma**2 * np.exp(-0.5 * (k * sigma) ** 2) * k
     return [((g_l + g_t) * gauss).sum() / (2 * np.pi), -((g_l - g_t) * k**2 * sigma**4 * gauss).sum() / (4 * np.pi)]

@@ -103,22 +103,24 @@ def checked_field(name: str, field: Any, components: int) -> NDArray[Any]:
     return array
 
 
-def _panels(eta: float, finest: float) -> tuple[Array, Array]:
-    """Gauss-Legendre nodes and weights on [0, 5.5], graded towards 0 down to ``finest``, split at half-integers."""
+def _panels(eta: float, thin: bool) -> tuple[Array, Array]:
+    """Gauss-Legendre nodes and weights on [0, 5.5], graded towards 0 and split at half-integers.
+
+    The difference is smooth on the scale of the thickness; the response itself (``thin``) is 1/r below it, which asks
+    for finer panels, and nothing beyond 60 thicknesses.
+    """
+    size = min(eta * 2.0**-24 if thin else eta, 0.5)
     edges = [0.0]
-    size = min(finest, 0.5)
     while size < 0.5:
         edges.append(size)
-        size *= 2.0
+        size *= 4.0 if size < eta else 2.0  # where only 1/r is left, wide panels suffice
     edges.extend(np.arange(0.5, _NEAR + 2.0, 0.5))
     bounds = np.array(edges)
-    count = 14
-    points, weights = np.polynomial.legendre.leggauss(count)
+    points, weights = np.polynomial.legendre.leggauss(14)
     half = 0.5 * np.diff(bounds)[:, None]
-    nodes = (bounds[:-1, None] + half * (1.0 + points)).ravel()
-    all_weights = (half * weights).ravel()
-    keep = nodes < 1.5 * CUTOFF * max(eta, _THIN / 2)  # nothing is left of a layer's response further out
-    return (nodes[keep], all_weights[keep]) if finest < eta / 2 else (nodes, all_weights)
+    nodes, all_weights = (bounds[:-1, None] + half * (1.0 + points)).ravel(), (half * weights).ravel()
+    keep = nodes < (CUTOFF * eta if thin else np.inf)
+    return nodes[keep], all_weights[keep]
 
 
 def _near_block(quantity: Quantity, gel: Gel, spacing: float, receiver: str) -> Array:
@@ -129,7 +131,7 @@ def _near_block(quantity: Quantity, gel: Gel, spacing: float, receiver: str) -> 
     """
     eta = float(gel.thickness or 0.0) / spacing
     thin = eta < _THIN
-    nodes, weights = _panels(eta, eta * 2.0**-24 if thin else eta)
+    nodes, weights = _panels(eta, thin)
     response = quantity.response(gel, spacing, "total" if thin else "difference")
     values = response(nodes[None, :], nodes[:, None])
     weight = weight_of(receiver)

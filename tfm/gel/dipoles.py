@@ -216,13 +216,14 @@ def dipole_interaction(
     torque_b = 2.0 * b_xy * (strain_a[0] - strain_a[2]) - 2.0 * (b_xx - b_yy) * strain_a[1]
     force = -scale * _energy_gradient(a, b, x_array, y_array, f)
     doubled = np.array([1.0, 2.0, 1.0])
+    components = (*energy.shape, 3)
     return DipoleInteraction(
         energy=energy,
         force_on_b=np.moveaxis(force, 0, -1),
         torque_on_b=torque_b,
         torque_on_a=torque_a,
-        energy_by_dipole_a=np.moveaxis(strain_b, 0, -1) * doubled,
-        energy_by_dipole_b=np.moveaxis(strain_a, 0, -1) * doubled,
+        energy_by_dipole_a=np.broadcast_to(np.moveaxis(strain_b, 0, -1) * doubled, components).copy(),
+        energy_by_dipole_b=np.broadcast_to(np.moveaxis(strain_a, 0, -1) * doubled, components).copy(),
     )
 
 

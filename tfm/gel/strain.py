@@ -18,7 +18,7 @@ from tfm.gel.assembly import checked_field, checked_lattice
 from tfm.gel.kernel import node_strain_kernel
 from tfm.gel.model import Gel
 from tfm.gel.operator import padded_shape, wrapped_kernel
-from tfm.gel.radial import radial_functions
+from tfm.gel.radial import CUTOFF, radial_functions
 from tfm.gel.tensor import assemble_gradient
 
 __all__ = ["full_strain", "strain_at", "surface_strain"]
@@ -173,10 +173,12 @@ def _node_gradient(gel: Gel, dx: Array, dy: Array, spacing: float) -> Array:
     if gel.thickness is None:
         return scale * _closed_gradient(dx, dy, gel.poisson)
     out = np.zeros((2, 3, *dx.shape))
-    far = np.hypot(dx, dy) > max(4.0, 1.5 * gel.thickness / spacing)
-    out[:, :, ~far] = _closed_gradient(dx[~far], dy[~far], gel.poisson)
+    r = np.hypot(dx, dy)
+    near = r <= max(4.0, 1.5 * gel.thickness / spacing)
+    reached = ~near & (r <= CUTOFF * gel.thickness / spacing + 1.0)
+    out[:, :, near] = _closed_gradient(dx[near], dy[near], gel.poisson)
     points, weights = np.polynomial.legendre.leggauss(5)
-    for where, part in ((far, "total"), (~far, "difference")):
+    for where, part in ((reached, "total"), (near, "difference")):
         for step_y, weight_y in zip(0.5 * points, 0.5 * weights, strict=True):
             for step_x, weight_x in zip(0.5 * points, 0.5 * weights, strict=True):
                 x, y = (dx[where] + step_x) * spacing, (dy[where] + step_y) * spacing
