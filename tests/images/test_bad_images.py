@@ -44,19 +44,25 @@ def check_refusal(error: TfmError, code: str, given: object, capfd: pytest.Captu
 
 
 @pytest.mark.parametrize("bad", corpus.IMAGES, ids=lambda bad: bad.name)
-def test_bad_image(bad: object, tmp_path: Path, capfd: pytest.CaptureFixture[str]) -> None:
+def test_bad_image(
+    bad: object, tmp_path: Path, capfd: pytest.CaptureFixture[str], caplog: pytest.LogCaptureFixture
+) -> None:
     path = bad.make(tmp_path)  # type: ignore[attr-defined]
     with pytest.raises((InputError, MeasurementError)) as error:
         open_frames(path).frame()
     check_refusal(error.value, bad.code, path, capfd)  # type: ignore[attr-defined]
+    assert not caplog.records
 
 
 @pytest.mark.parametrize("bad", corpus.OUTLINES, ids=lambda bad: bad.name)
-def test_bad_outline(bad: object, tmp_path: Path, capfd: pytest.CaptureFixture[str]) -> None:
+def test_bad_outline(
+    bad: object, tmp_path: Path, capfd: pytest.CaptureFixture[str], caplog: pytest.LogCaptureFixture
+) -> None:
     text = str(bad.make(tmp_path))  # type: ignore[attr-defined]
     with pytest.raises((InputError, MeasurementError)) as error:
         read_outlines(text, corpus.SHAPE, base="/nowhere")
     check_refusal(error.value, bad.code, text, capfd)  # type: ignore[attr-defined]
+    assert not caplog.records
 
 
 def test_the_corpus_is_as_large_as_promised() -> None:

@@ -156,9 +156,7 @@ def _local_pull(u: Field, noise: float, overlap: float) -> tuple[Field, float, f
         measured = float(np.median(size)) / 1.1774
         sd = max(noise * gain * math.sqrt(overlap), measured)
         if float(size.max()) > 2.0 * _ABOVE_NOISE * sd:
-            return pull, width, sd
-    if float(size.max()) <= _ABOVE_NOISE * sd or not size.max() > 0:
-        raise _nothing()
+            break
     return pull, width, sd
 
 
