@@ -75,7 +75,7 @@ def test_the_moments_put_in_rise_with_stiffness_as_the_readme_says():
         np.mean([float(r["contractile_moment_pNm"]) for r in truth if r["field"].startswith(f"tendon_{e}kPa")])
         for e in (2, 6, 18)
     ]
-    assert means == pytest.approx([0.8 * e / (e + 5) for e in (2, 6, 18)], rel=0.2)
+    assert means == pytest.approx([1.6 * e / (e + 10) for e in (2, 6, 18)], rel=0.2)
     for row in truth:
         total = -(float(row["dipole_xx_pNm"]) + float(row["dipole_yy_pNm"]))
         assert total == pytest.approx(float(row["contractile_moment_pNm"]), abs=2e-6)

@@ -21,6 +21,7 @@ __all__ = ["DEMO_SEED", "write_demo"]
 #: The seed from which every number of the demo follows.
 DEMO_SEED = 20_461
 
+_DENSITY, _PHOTONS = 0.025, 600.0  # beads per pixel, photons per bead and frame
 _SHEET = (
     "field", "condition", "stressed", "relaxed", "outline", "pixel", "youngs_modulus", "youngs_modulus_sd", "poisson",
     "poisson_sd", "thickness", "noise_energy",
@@ -46,7 +47,7 @@ def write_demo(directory: str | Path) -> Path:
     """Write the demo study into ``directory`` and return the path of its sheet.
 
     Invented tendon fibroblasts on gels of 2, 6 and 18 kPa (four fields each, moments drawn around
-    0.8 pN m E / (E + 5 kPa)), two neighbours on a 15 um thin gel, a short time series, and two fields with a planted
+    1.6 pN m E / (E + 10 kPa)), two neighbours on a 15 um thin gel, a short time series, and two fields with a planted
     problem. Everything follows from :data:`DEMO_SEED`: written again, the files are the same bytes.
     """
     root = Path(directory)
@@ -70,7 +71,7 @@ def _stiffness_series(study: _Study) -> None:
     for index, stiffness in enumerate((2e3, 6e3, 18e3)):
         for repeat in range(4):
             rng = np.random.default_rng((DEMO_SEED, index, repeat))
-            moment = 0.8e-12 * stiffness / (stiffness + 5e3) * float(rng.lognormal(0, 0.15))
+            moment = 1.6e-12 * stiffness / (stiffness + 10e3) * float(rng.lognormal(0, 0.15))
             cell = _cell(rng, (512, 512), (51e-6 + rng.uniform(-8e-6, 8e-6), 51e-6 + rng.uniform(-8e-6, 8e-6)), moment)
             gel = Gel(youngs_modulus=stiffness, poisson=0.48, thickness=60e-6)
             made = _images(rng, [cell], gel)
@@ -113,7 +114,7 @@ def _time_series(study: _Study) -> None:
     gel = Gel(youngs_modulus=6e3, poisson=0.48, thickness=60e-6)
     cell = _cell(rng, shape, (38.4e-6, 38.4e-6), 0.45e-12, length=32e-6)
     alone = cell_displacements([cell], gel)[0]
-    beads = make_beads(shape, 0.02, rng, margin=12, photons=500)
+    beads = make_beads(shape, _DENSITY, rng, margin=12, photons=_PHOTONS)
     shifts = displacement_at(alone / PIXEL, -16.0, 1.0, beads.positions)
     levels = (0.55, 0.72, 0.90, 1.0, 0.93, 0.78)
     base = make_field([cell], gel, rng, fields=[alone])
@@ -146,7 +147,7 @@ def _time_series(study: _Study) -> None:
 def _wrong_poisson(study: _Study) -> None:
     """The sheet says nu = 0.30; the beads moved as on a gel of 0.49."""
     rng = np.random.default_rng((DEMO_SEED, 30))
-    cell = _cell(rng, (512, 512), (50e-6, 52e-6), 0.44e-12)
+    cell = _cell(rng, (512, 512), (50e-6, 52e-6), 0.60e-12)
     made = _images(rng, [cell], Gel(youngs_modulus=6e3, poisson=0.49, thickness=60e-6))
     _store(
         study,
@@ -165,8 +166,8 @@ def _wrong_poisson(study: _Study) -> None:
 def _stranger(study: _Study) -> None:
     """Two cells pull, one of them has no outline."""
     rng = np.random.default_rng((DEMO_SEED, 40))
-    first = _cell(rng, (512, 512), (36e-6, 40e-6), 0.40e-12, length=36e-6)
-    second = _cell(rng, (512, 512), (74e-6, 74e-6), 0.55e-12, length=34e-6)
+    first = _cell(rng, (512, 512), (36e-6, 40e-6), 0.55e-12, length=36e-6)
+    second = _cell(rng, (512, 512), (74e-6, 74e-6), 0.70e-12, length=34e-6)
     made = _images(rng, [first, second], Gel(youngs_modulus=6e3, poisson=0.48, thickness=60e-6))
     hidden = replace(made, labels=np.where(made.labels == 1, 1, 0).astype(np.int32))
     _store(
@@ -208,7 +209,14 @@ def _cell(
 def _images(rng: np.random.Generator, cells: list[SyntheticCell], gel: Gel) -> SyntheticField:
     drift = tuple(float(v) for v in rng.uniform(-2.5, 2.5, 2))
     return make_field(
-        cells, gel, rng, density_per_px2=0.02, photons=500, sigma=1.25, camera=Camera(), drift=(drift[0], drift[1])
+        cells,
+        gel,
+        rng,
+        density_per_px2=_DENSITY,
+        photons=_PHOTONS,
+        sigma=1.25,
+        camera=Camera(),
+        drift=(drift[0], drift[1]),
     )
 
 

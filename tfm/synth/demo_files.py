@@ -124,7 +124,10 @@ Files
   truth.csv         dipole (sum of position times force), moment, strain energy of every cell, as put in
   truth_pairs.csv   interaction energies, as put in
 
-How the images were made: about 0.02 beads per pixel at random positions, 500 photons each on average, a Gaussian image
+Moments of the single cells were drawn around 1.6 pN m E / (E + 10 kPa), E the gel's Young's modulus, with a spread
+of 15 %.
+
+How the images were made: about 0.025 beads per pixel at random positions, 600 photons each on average, a Gaussian image
 of 1.25 px, 10 background photons per pixel, Poisson noise, read noise of 1.5 photons; new noise in every frame; the
 whole stressed frame has drifted by up to 2.5 pixels.
 """
