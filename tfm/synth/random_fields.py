@@ -17,7 +17,7 @@ from tfm.synth.fields import SyntheticField, cell_displacements, make_field
 
 __all__ = ["random_cells", "random_field", "random_gel"]
 
-_LARGEST_GRADIENT = 0.5
+_LARGEST_GRADIENT = 0.25
 
 
 def random_gel(rng: np.random.Generator, *, thin: bool | None = None) -> Gel:
@@ -108,7 +108,7 @@ def random_field(
 
     384-640 px of 0.16-0.26 um, one to three cells, E 1-20 kPa, nu 0.3-0.5, gels of 10-60 um or infinitely thick,
     0.006-0.03 beads per px^2, 200-1,000 photons per bead, bead sigma 1.1-1.5 px, moments such that the largest shift is
-    0.5-6 px (log-uniform; less where the gradient of the displacement would exceed 0.5), drift of up to 3 px.
+    0.5-6 px (log-uniform; less where the gradient of the displacement would exceed 0.25), drift of up to 3 px.
     With nodes of one pixel the shift of a bead is exact to 4e-5 px rms (largest error 0.002 px at a shift of 3 px);
     half a pixel divides that by more than four and costs four times the time.
 
