@@ -134,6 +134,16 @@ def test_auto_in_the_sheet(tmp_path: Path) -> None:
     assert error.value.code == "outline-format"
 
 
+def test_auto_on_a_movie_with_an_empty_frame(tmp_path: Path) -> None:
+    frames = [fluorescence((CELL, 300.0)), fluorescence(), fluorescence((CELL, 300.0))]
+    tifffile.imwrite(tmp_path / "movie.tif", np.stack(frames).astype(np.uint16), imagej=True, metadata={"axes": "TYX"})
+    outlines = read_outline_stack("auto:movie.tif", (400, 400), base=tmp_path, n_frames=3)
+    assert outlines.at(2).cells == (1,)
+    with pytest.raises(MeasurementError) as error:
+        outlines.at(1)
+    assert error.value.code == "no-cell-found"
+
+
 def test_auto_on_a_movie_follows_the_cells(tmp_path: Path) -> None:
     frames = []
     for t in range(3):

@@ -96,6 +96,19 @@ def test_imagej_hyperstack_and_the_single_header_form_of_large_files(tmp_path: P
     np.testing.assert_array_equal(stack.frame(2, channel=1, plane=0), data[2, 0, 1])
 
 
+def test_smaller_copies_of_a_pyramid_are_left_alone(tmp_path: Path) -> None:
+    data = numbered(3, shape=(128, 128))
+    path = tmp_path / "pyramid.ome.tif"
+    options = {"photometric": "minisblack", "tile": (32, 32), "compression": "zlib"}
+    with tifffile.TiffWriter(path, ome=True) as writer:
+        writer.write(data, subifds=1, metadata={"axes": "TYX"}, **options)  # type: ignore[arg-type]
+        writer.write(data[:, ::2, ::2], subfiletype=1, **options)  # type: ignore[arg-type]
+    stack = open_frames(path)
+    assert (stack.n_frames, stack.shape) == (3, (128, 128))
+    for t in range(3):
+        np.testing.assert_array_equal(stack.frame(t), data[t])
+
+
 def test_volumetric_pages_hold_several_planes(tmp_path: Path) -> None:
     data = numbered(16, shape=(32, 32))
     path = tmp_path / "volume.tif"

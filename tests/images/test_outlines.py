@@ -350,6 +350,19 @@ def test_label_stack_follows_the_cells(tmp_path: Path) -> None:
         outlines.at(5)
 
 
+def test_cells_may_leave_before_the_series_ends(tmp_path: Path) -> None:
+    stack = moving(3)
+    stack[1] = 0
+    path = label_file(tmp_path, stack, imagej=True, metadata={"axes": "TYX"})
+    outlines = read_outline_stack(path, SHAPE, base=tmp_path)
+    assert outlines.at(1).cells == ()
+    assert outlines.at(2).labels[25, 50] == 2
+    path = label_file(tmp_path, stack * 0, "none.tif", imagej=True, metadata={"axes": "TYX"})
+    with pytest.raises(InputError, match="no frame holds a cell") as error:
+        read_outline_stack(path, SHAPE, base=tmp_path)
+    assert error.value.code == "no-outline"
+
+
 def test_one_set_of_outlines_holds_for_every_frame(tmp_path: Path) -> None:
     outlines = read_outline_stack(str(geojson(tmp_path, feature(SQUARE))), SHAPE, n_frames=9)
     assert outlines.n_frames == 1

@@ -64,7 +64,10 @@ class BeadStack:
     saturation_level
         Largest value that the camera can store, or None for float images.
     origin
-        Which part of the metadata gave the pixel size: ``OME``, ``ImageJ``, ``resolution tags`` or empty.
+        Which part of the metadata gave the pixel size: ``OME``, ``ImageJ``, ``resolution tags``, the maker's format
+        (``ND2``, ``LIF``, ``CZI``) or empty.
+    source
+        What reads the planes.
     """
 
     path: str
@@ -241,7 +244,7 @@ def _name_axes(path: str, declared: str, sizes: tuple[int, ...], given: str | No
             f"the file does not say what its {stack} planes are (time, height or channel)",
             code="unnamed-axis",
             file=path,
-            remedy="save it with named axes (in ImageJ: Image > Properties), or name them",
+            remedy="save it with named axes (in ImageJ: Image > Properties, number of slices and frames)",
         )
     return declared, sizes
 

@@ -159,18 +159,36 @@ def _image_outlines(stack: BeadStack, shape: tuple[int, int], source: str, n_fra
             remedy="give one label image, or one per stressed frame",
         )
     follower = LabelFollower()
-    mappings = tuple(follower.step(_frame_outlines(stack, t, shape, source).labels) for t in range(stack.n_frames))
+    mappings = tuple(follower.step(_labels_or_none(stack, t, shape, source)) for t in range(stack.n_frames))
+    if not any(mappings):
+        raise InputError(
+            "no frame holds a cell",
+            code="no-outline",
+            file=stack.path,
+            remedy="draw the outlines, or name another image of the cells",
+        )
     return OutlineStack(stack.n_frames, source, None, stack, (int(shape[0]), int(shape[1])), mappings)
+
+
+def _labels_or_none(stack: BeadStack, t: int, shape: tuple[int, int], source: str) -> NDArray[np.int32]:
+    """Labels of a frame, for following; a frame in which no cell is found says so when it is asked for."""
+    try:
+        return _frame_outlines(stack, t, shape, source).labels
+    except MeasurementError as error:
+        if error.code != "no-cell-found":
+            raise
+        return np.zeros(shape, dtype=np.int32)
 
 
 def _frame_outlines(stack: BeadStack, t: int, shape: tuple[int, int], source: str) -> Outlines:
     if source == "automatic":
         return _with_cell_notes(segment_cells(stack.frame(t), file=stack.path))
-    labels = _as_labels(stack.stored(t), stack.path)
+    # In a series the cells may have left before the last frame; a single empty image is a mistake.
+    labels = _as_labels(stack.stored(t), stack.path, may_be_empty=stack.n_frames > 1)
     return _with_cell_notes(Outlines(labels, source))
 
 
-def _as_labels(values: NDArray[Any], file: str) -> NDArray[np.int32]:
+def _as_labels(values: NDArray[Any], file: str, *, may_be_empty: bool) -> NDArray[np.int32]:
     remedy = "save 0 for no cell and 1, 2, 3, ... for the cells"
     if values.dtype.kind == "f" and not (np.isfinite(values).all() and np.array_equal(values, np.round(values))):
         raise InputError(
@@ -184,7 +202,7 @@ def _as_labels(values: NDArray[Any], file: str) -> NDArray[np.int32]:
             file=file,
             remedy=remedy,
         )
-    if high == 0:
+    if high == 0 and not may_be_empty:
         raise InputError(
             "the label image is empty: no pixel belongs to a cell", code="no-outline", file=file, remedy=remedy
         )
