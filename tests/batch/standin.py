@@ -83,7 +83,12 @@ def _measure(row: Any, files: Any, settings: Any, writer: Any, log: Any) -> Fiel
         "cov_xx_xy_pNm2": 0.0, "cov_xx_yy_pNm2": 0.0, "cov_xy_yy_pNm2": 0.0, "contractile_moment_sd_pNm": 0.1 * 2**0.5,
     }  # fmt: skip
     result = FieldResult(cells=[cell], fields=[{"frame": 0, "status": "ok", "message": "", "vectors": 7}])
-    result.gel = {"youngs_modulus_Pa": row.youngs_modulus, "poisson": row.poisson, "verdict": "cannot tell", "notes": ""}
+    result.gel = {
+        "youngs_modulus_Pa": row.youngs_modulus,
+        "poisson": row.poisson,
+        "verdict": "cannot tell",
+        "notes": "",
+    }
     result.settle()
     return result
 

@@ -32,7 +32,12 @@ def _run(sheet: Path, out: Path, seen: list[Outcome] | None = None, **options: o
     settings = options.pop("settings", None)
     log = [] if seen is None else seen
     return run_sheet(
-        sheet, out, settings=settings, options=RunOptions(**options), on_field=log.append, work=work  # type: ignore[arg-type]
+        sheet,
+        out,
+        settings=settings,
+        options=RunOptions(**options),
+        on_field=log.append,
+        work=work,  # type: ignore[arg-type]
     )
 
 
@@ -288,7 +293,21 @@ def test_a_wider_root_lets_files_lie_elsewhere(tmp_path: Path) -> None:
     assert _run(sheet, tmp_path / "out", root=tmp_path).exit_code == 0
 
 
-NASTY = ["../up", "a/b", "con", ".hidden", "A", "a", "<script>alert(1)</script>", "=1+1", "\u00e9t\u00e9", "x" * 200, "t~1", "..", "%2E"]
+NASTY = [
+    "../up",
+    "a/b",
+    "con",
+    ".hidden",
+    "A",
+    "a",
+    "<script>alert(1)</script>",
+    "=1+1",
+    "\u00e9t\u00e9",
+    "x" * 200,
+    "t~1",
+    "..",
+    "%2E",
+]
 
 
 def test_names_never_become_paths(tmp_path: Path) -> None:

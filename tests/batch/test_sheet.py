@@ -125,9 +125,19 @@ BAD_SHEETS: list[tuple[str, int | None, str, str | bytes]] = [
     ("wrong-unit", 2, "youngs_modulus", _sheet("a,s.tif,r.tif,5 Pa**9**9**9**9,0.45")),
     ("wrong-unit", 2, "youngs_modulus", _sheet("a,s.tif,r.tif,5 __import__('os'),0.45")),
     ("wrong-unit", 2, "poisson", _sheet("a,s.tif,r.tif,5 kPa,45 %")),
-    ("two-units", 2, "youngs_modulus", _sheet("a,s.tif,r.tif,5 Pa,0.45", head=HEAD.replace("modulus", "modulus [kPa]"))),
+    (
+        "two-units",
+        2,
+        "youngs_modulus",
+        _sheet("a,s.tif,r.tif,5 Pa,0.45", head=HEAD.replace("modulus", "modulus [kPa]")),
+    ),
     ("decimal-comma", 2, "youngs_modulus", _sheet('a,s.tif,r.tif,"5,5 kPa",0.45')),
-    ("decimal-comma", 2, "poisson", _sheet(GOOD.replace(",", ";").replace("0.45", "0,45"), head=HEAD.replace(",", ";"))),
+    (
+        "decimal-comma",
+        2,
+        "poisson",
+        _sheet(GOOD.replace(",", ";").replace("0.45", "0,45"), head=HEAD.replace(",", ";")),
+    ),
     ("decimal-comma", 2, "youngs_modulus", _sheet('a,s.tif,r.tif,"5,000 Pa",0.45')),
     ("bad-number", 2, "youngs_modulus", _sheet("a,s.tif,r.tif,soft,0.45")),
     ("bad-number", 2, "youngs_modulus", _sheet("a,s.tif,r.tif,~5 kPa,0.45")),
@@ -203,7 +213,10 @@ def test_a_standard_deviation_may_be_a_percentage(tmp_path: Path) -> None:
 def test_rows_are_counted_as_a_spreadsheet_counts(tmp_path: Path) -> None:
     # A quoted cell with a line end is one row, a blank line is one too.
     with pytest.raises(SheetError) as caught:
-        _read(tmp_path, _sheet('a,s.tif,r.tif,5 kPa,0.45,"two\nlines"', "", "b,s.tif,r.tif,5,0.45,", head=HEAD + ",remark"))
+        _read(
+            tmp_path,
+            _sheet('a,s.tif,r.tif,5 kPa,0.45,"two\nlines"', "", "b,s.tif,r.tif,5,0.45,", head=HEAD + ",remark"),
+        )
     assert [p.row for p in caught.value.problems] == [4]
 
 

@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import concurrent.futures as cf
 import csv
 import os
 import signal
 import subprocess
 import sys
 import time
+from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
+from typing import Any
 
 import pytest
 from standin import make_sheet, work
@@ -35,9 +38,9 @@ def test_the_field_that_kills_its_worker_is_named_and_no_other_is_lost(tmp_path:
     sheet = make_sheet(tmp_path, ["a", "die-1", "slow-1", "dieonce-1", "e"])
     seen: list[Outcome] = []
     summary = _run(sheet, tmp_path / "out", seen, workers=2)
+    assert {o.field: o.code for o in seen if o.code} == {"die-1": "worker-died"}
     assert summary.exit_code == 1
     assert _statuses(tmp_path / "out") == {"a": "ok", "die-1": "failed", "slow-1": "ok", "dieonce-1": "ok", "e": "ok"}
-    assert {o.field: o.code for o in seen if o.code} == {"die-1": "worker-died"}
 
 
 @pytest.mark.parametrize("count", [1, 2])
@@ -62,7 +65,9 @@ def test_a_worker_that_does_not_hear_its_alarm_is_killed(tmp_path: Path, monkeyp
 
 DRIVER = """
 import sys
+from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
+from typing import Any
 from standin import work
 from tfm.batch.run import RunOptions, run_sheet
 if __name__ == "__main__":
@@ -134,7 +139,9 @@ def test_a_missing_scheduler_is_said(tmp_path: Path) -> None:
 
 CLUSTER = """
 import os, signal, sys, threading, time
+from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
+from typing import Any
 from distributed import LocalCluster
 from standin import work
 from tfm.batch.run import RunOptions, run_sheet
@@ -178,3 +185,29 @@ def test_a_dask_cluster_with_a_killed_worker_gives_the_bytes_of_one_process(tmp_
     run_sheet(sheet, tmp_path / "here", work=work)
     for name in ("cells.csv", "pairs.csv", "gel.csv", "fields.csv"):
         assert (tmp_path / "dask" / name).read_bytes() == (tmp_path / "here" / name).read_bytes()
+
+
+class _Brittle(cf.ThreadPoolExecutor):
+    """A pool that is found broken at its third submission."""
+
+    made = 0
+
+    def __init__(self, workers: int, **_: object) -> None:
+        super().__init__(workers)
+        self.submitted = 0
+        type(self).made += 1
+
+    def submit(self, *args: Any, **options: Any) -> Any:
+        self.submitted += 1
+        if self.submitted > 2 and type(self).made == 1:
+            raise BrokenProcessPool
+        return super().submit(*args, **options)
+
+
+def test_a_pool_found_broken_between_two_fields_loses_none(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(workers.cf, "ProcessPoolExecutor", _Brittle)
+    sheet = make_sheet(tmp_path, [f"f{i}" for i in range(6)])
+    seen: list[Outcome] = []
+    assert _run(sheet, tmp_path / "out", seen, workers=2).exit_code == 0
+    assert len(seen) == 6
+    assert _Brittle.made == 2

@@ -19,7 +19,6 @@ A vector that was not measured is NaN; a frame that failed is NaN throughout.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from contextlib import suppress
 from pathlib import Path
 from types import TracebackType
 from typing import Any
@@ -30,6 +29,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tfm.batch.atomic import storage_guard
+from tfm.batch.sink import PatientFile
 from tfm.errors import MeasurementError
 
 __all__ = ["FieldWriter", "verify_netcdf"]
@@ -78,7 +78,8 @@ class FieldWriter:
         self._path = path
         self._frames = 0
         with storage_guard(path):
-            self._file = h5netcdf.File(path, "w")
+            self._disk = PatientFile(path)
+            self._file = h5netcdf.File(self._disk, "w")
             self._file.attrs["Conventions"] = "CF-1.11"
             for name, value in attributes.items():
                 self._file.attrs[name] = value
@@ -92,13 +93,11 @@ class FieldWriter:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
+        self._file.close()
+        self._disk.close()
         if kind is None:
             with storage_guard(self._path):
-                self._file.close()
-        else:
-            # What went wrong is said already; a disk that is full refuses to close the file as well.
-            with suppress(OSError, RuntimeError):
-                self._file.close()
+                self._disk.check()
 
     def _axis_text(self, name: str, words: list[str]) -> None:
         self._file.dimensions[name] = len(words)
@@ -128,6 +127,8 @@ class FieldWriter:
             self._grow(frame)
             for name, values in arrays.items():
                 self._put(name, frame, values)
+            self._file.flush()
+            self._disk.check()
 
     def _put(self, name: str, frame: int, values: NDArray[Any]) -> None:
         dims, dtype, unit, meaning = _LABELLED[name]

@@ -64,7 +64,7 @@ class RunSummary:
     Attributes
     ----------
     exit_code
-        0 all usable, 1 some failed, 130 interrupted.
+        0 all usable, 1 some failed, 101 a fault of ours, 130 interrupted.
     entries
         One per row of the sheet.
     mine
@@ -250,6 +250,9 @@ def run_sheet(
         stopped, exit_code, outcome = "interrupted", 130, "interrupted"
     except StorageError as error:
         stopped, exit_code, outcome = str(error), 1, "stopped"
+    lost = mine - state.outcomes.keys()
+    if lost and not stopped:  # success is counted, never inferred from the absence of an error
+        stopped, exit_code, outcome = f"a fault of ours: {len(lost)} fields were never worked on", 101, "stopped"
     entries = _finish(state, outcome, exit_code, stopped)
     if exit_code == 0 and any(e.status == "failed" for e in entries if e.row.field in mine):
         exit_code = 1

@@ -131,23 +131,27 @@ class _Pool:
             context = mp.get_context("forkserver")
             context.set_forkserver_preload(_PRELOAD)
             self.pool = cf.ProcessPoolExecutor(self.workers, mp_context=context, initializer=_start_worker)
-        if self.suspects and not self.running:
-            self.alone = True
-            self._start(self.suspects.popleft())
-        if self.suspects or (self.alone and self.running):
-            return  # a suspect runs with nobody beside it
-        self.alone = False
-        while self.waiting and len(self.running) < self.workers:
-            self._start(self.waiting.popleft())
-
-    def _start(self, task: Task) -> None:
-        if self.pool is None:
+        if self.suspects:  # a suspect runs with nobody beside it
+            if not self.running:
+                self.alone = True
+                self._start(self.pool, self.suspects)
             return
+        if self.alone and self.running:
+            return
+        self.alone = False
+        while self.waiting and len(self.running) < self.workers and self._start(self.pool, self.waiting):
+            continue
+
+    def _start(self, pool: cf.ProcessPoolExecutor, queue: deque[Task]) -> bool:
+        """Hand the queue's first task to the pool; it stays in the queue when the pool turns out to be broken."""
         try:
-            self.running[self.pool.submit(self.work, task)] = (task, time.time())
-        except BrokenProcessPool:  # noticed between two fields: nobody's fault
-            (self.suspects if self.alone else self.waiting).appendleft(task)
-            self._stop()
+            future = pool.submit(self.work, queue[0])
+        except BrokenProcessPool:
+            if not self.running:
+                self._stop()  # a worker died between two fields: nobody's fault
+            return False
+        self.running[future] = (queue.popleft(), time.time())
+        return True
 
     def _collect(self, done: set[cf.Future[Outcome]]) -> Iterator[Outcome]:
         broken: list[Task] = []
