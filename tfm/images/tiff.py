@@ -198,12 +198,7 @@ def _planes(name: str, tif: Any, series: Any, max_pixels: int) -> TiffPlanes:
             remedy="save the image with plain T, Z and C axes",
         )
     plane, sizes = (shape[-2], shape[-1]), shape[:-2]
-    count, pages, size = math.prod(sizes), list(series.pages), os.path.getsize(name)
-    missing = sum(page is None for page in pages)
-    if missing or not pages:
-        raise MeasurementError(
-            f"{missing} of {len(pages)} planes are not in the file", code="missing-planes", file=name, remedy=RESAVE
-        )
+    count, size = math.prod(sizes), os.path.getsize(name)
     dtype = np.dtype(key.dtype).newbyteorder(tif.byteorder)
     inverted = int(key.photometric) == 0
     if series.dataoffset is not None and int(key.compression) == 1:
@@ -212,6 +207,12 @@ def _planes(name: str, tif: Any, series: Any, max_pixels: int) -> TiffPlanes:
             raise truncated(name, f"it claims {count * step} bytes of pixels and has {size}")
         offsets = tuple(int(series.dataoffset) + i * step for i in range(count))
         return TiffPlanes(name, axes[:-2], sizes, plane, dtype, offsets, (), inverted)
+    pages = list(series.pages)
+    missing = sum(page is None for page in pages)
+    if missing or not pages:
+        raise MeasurementError(
+            f"{missing} of {len(pages)} planes are not in the file", code="missing-planes", file=name, remedy=RESAVE
+        )
     if count % len(pages):
         raise MeasurementError(
             f"the header claims {count} planes and the file holds {len(pages)}",
