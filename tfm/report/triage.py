@@ -77,7 +77,7 @@ LIMITS: tuple[Limit, ...] = (
         "unexplained ground",
         0.5,
         "%",
-        "something pulls outside the outlines (a cell that is not outlined?), or the gel is not the one entered",
+        "pull outside the outlines (a cell not outlined?), or another gel than entered",
         lambda _, m: m.get("unexplained ground"),
     ),
     Limit(
