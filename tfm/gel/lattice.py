@@ -196,7 +196,7 @@ def _closed(receiver: str, ny: int, nx: int) -> Array:
     return np.diff(np.diff(parts, n=2, axis=1), n=2, axis=2)
 
 
-@lru_cache(maxsize=8)
+@lru_cache(maxsize=4)
 def half_space_lattice(receiver: str, ny: int, nx: int) -> Array:
     """``(3, ny, nx)`` averages of d_x d_x r, d_x d_y r, d_y d_y r at offsets dy, dx >= 0 (read-only, cached)."""
     out = np.empty((3, ny, nx))

@@ -133,7 +133,7 @@ def _apply(transform: NDArray[Any], field: NDArray[Any], workers: int) -> NDArra
     return np.ascontiguousarray(scipy.fft.irfft(back, n=mx, axis=2, workers=workers)[:, :, :nx])
 
 
-@lru_cache(maxsize=4)
+@lru_cache(maxsize=2)
 def _operator(gel: Gel, shape: tuple[int, int], spacing: float, workers: int) -> SurfaceOperator:
     return SurfaceOperator(gel, shape, spacing, workers=workers)
 
