@@ -384,6 +384,11 @@ IMAGES = [
         ),
     ),
     Bad(
+        "OME that is a part only",
+        "several-files",
+        described('<OME xmlns="o"><BinaryOnly MetadataFile="all.ome"/></OME>'),
+    ),
+    Bad(
         "OME with a split axis",
         "ome-metadata",
         ome(
@@ -470,6 +475,7 @@ OUTLINES = [
     Bad("line region", "not-an-area", write(region("LINE"), "a.roi")),
     Bad("point region", "not-an-area", write(region("POINT"), "a.roi")),
     Bad("region of no size", "bad-polygon", write(region("RECT", right=10), "a.roi")),
+    Bad("text region", "not-an-area", write(region("RECT", subtype=roifile.ROI_SUBTYPE.TEXT), "a.roi")),
     Bad("rounded rectangle", "roi", write(region("RECT", rounded_rect_arc_size=5), "a.roi")),
     Bad("zip without regions", "roi", zip_of({"readme.txt": b"hello"})),
     Bad("zip of something else", "roi", zip_of({"a.roi": b"not a region at all" * 9})),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import pickle
+import re
 import struct
 import subprocess
 import sys
@@ -94,6 +95,23 @@ def test_imagej_hyperstack_and_the_single_header_form_of_large_files(tmp_path: P
     assert stack.frame_interval == 12.5
     assert stack.origin == "ImageJ"
     np.testing.assert_array_equal(stack.frame(2, channel=1, plane=0), data[2, 0, 1])
+
+
+def test_renamed_ome_file_that_knows_itself(tmp_path: Path) -> None:
+    # Bio-Formats writes the file's name beside its identifier; renaming the file must not orphan its own planes.
+    path = tmp_path / "new name.ome.tif"
+    data = numbered(5)
+    tifffile.imwrite(path, data, ome=True, metadata={"axes": "TYX"})
+    own = "urn:uuid:11111111-2222-3333-4444-555555555555"
+    with tifffile.TiffFile(path, mode="r+b") as tif:
+        text = tif.pages[0].description
+        text = re.sub(r'UUID="[^"]*"', f'UUID="{own}"', text, count=1)
+        text = re.sub(r"<TiffData([^>]*)/>", rf'<TiffData\1><UUID FileName="old.ome.tif">{own}</UUID></TiffData>', text)
+        assert text.count(own) == 2
+        tif.pages[0].tags["ImageDescription"].overwrite(text.encode())
+    stack = open_frames(path)
+    assert stack.n_frames == 5
+    np.testing.assert_array_equal(stack.frame(4), data[4])
 
 
 def test_smaller_copies_of_a_pyramid_are_left_alone(tmp_path: Path) -> None:

@@ -63,13 +63,15 @@ def check_ome_claims(name: str, root: Element, *, pages: int, samples: int) -> N
                 file=name,
                 remedy="save the image with plain T, Z and C axes",
             )
-        other = element.get("FileName", own) if kind == "UUID" else own
-        if other.lower() != own:
+        # A renamed file still carries its own identifier; only another file's planes are out of reach.
+        is_own = element.text == root.get("UUID") if root.get("UUID") else element.get("FileName", own).lower() == own
+        if kind == "BinaryOnly" or (kind == "UUID" and not is_own):
+            other = element.get("FileName") or element.get("MetadataFile") or "another file"
             raise InputError(
-                f"its planes lie in other files, or it was renamed from '{other[:80]}'",
+                f"it is a part of several files ('{other[:80]}')",
                 code="several-files",
                 file=name,
-                remedy="give the file its name back, or save the stack as one file",
+                remedy="save the stack as one file; if it was one and was renamed, give it that name back",
             )
         values = [_whole(name, key, text) for key in _COUNTS.get(kind, ()) if (text := element.get(key)) is not None]
         claim = math.prod(values) if kind == "Pixels" else max(values, default=0)

@@ -22,6 +22,7 @@ __all__ = ["read_roi"]
 _MAX_ROI = 4 * 1024 * 1024
 _MAX_COUNT = 10_000
 _AREAS = {0: "polygon", 1: "rectangle", 2: "oval", 7: "freehand", 8: "traced"}
+_DECORATIONS = (1, 2, 4)  # text, arrow, image: boxes on the picture that outline nothing
 _OTHERS = {3: "line", 4: "freehand line", 5: "segmented line", 6: "no region", 9: "angle", 10: "point"}
 
 
@@ -84,6 +85,13 @@ def _unzip(data: bytes, file: str) -> list[tuple[str, bytes]]:
 
 def _shape(roi: Any, name: str, file: str) -> Shape:
     kind = int(roi.roitype)
+    if int(roi.subtype) in _DECORATIONS:
+        raise InputError(
+            f"{name} is a text, arrow or picture, not an area",
+            code="not-an-area",
+            file=file,
+            remedy="keep only the cells' outlines",
+        )
     if kind not in _AREAS:
         raise InputError(
             f"{name} is a {_OTHERS.get(kind, 'region of an unknown kind')}, not an area",
