@@ -122,8 +122,8 @@ def run(
         str, typer.Option(help="image, bounded or fourier; auto = image where there are bead images, else bounded.")
     ] = "auto",
     workers: Annotated[
-        int, typer.Option(min=1, help="Processes; fields are shared among them. Default: all cores.")
-    ] = 0,
+        int | None, typer.Option(min=1, help="Processes; fields are shared among them. Default: all cores.")
+    ] = None,
     scheduler: Annotated[
         str | None, typer.Option(help="Address of a Dask scheduler to compute on (extra 'cluster').")
     ] = None,
@@ -271,6 +271,138 @@ def demo(
     with storage_guard(folder):
         sheet = write_demo(folder)
     _say(f"next: tfm run {_quoted(str(sheet))} -o {_quoted(str(folder / 'results'))}")
+    return 0
+
+
+@app.command()
+def stiffness(
+    folders: Annotated[list[Path], typer.Argument(help="Results folders of runs on gels of different stiffness.")],
+    output: Annotated[Path, typer.Option("--output", "-o", help="Folder for tables and figure.")],
+    debug: Debug = False,
+) -> int:
+    """How the contractile moment depends on stiffness: response, best stiffness for coupling, intervals."""
+    from tfm.population.commands import write_stiffness
+
+    for line in write_stiffness(folders, output):
+        _say(line)
+    return 0
+
+
+@app.command()
+def export(
+    folder: Annotated[Path, typer.Argument(help="Results folder of a run.")],
+    output: Annotated[Path, typer.Option("--output", "-o", help="JSON file to write.")],
+    frame: Annotated[str, typer.Option(help="y-down, as in the image, or y-up.")] = "y-down",
+    draws: Annotated[int, typer.Option(min=0, help="Made-up cells per condition, measurement error removed.")] = 0,
+    seed: Annotated[int, typer.Option(help="Of the draws.")] = 0,
+    debug: Debug = False,
+) -> int:
+    """Dipoles, pairs and populations as one JSON document for a mechanical model."""
+    from tfm.population.commands import write_export
+
+    for line in write_export(folder, output, frame=frame, draws=draws, seed=seed):
+        _say(line)
+    return 0
+
+
+@app.command(name="map")
+def map_command(
+    cells: Annotated[Path, typer.Argument(help="Table with field, cell and the dipoles; cells.csv will do.")],
+    field: Annotated[str, typer.Option(help="Field of the measured cell.")],
+    cell: Annotated[str, typer.Option(help="Number of the measured cell.")],
+    youngs_modulus: Annotated[str, typer.Option(help="Young's modulus with its unit, for instance '5 kPa'.")],
+    poisson: Annotated[str, typer.Option(help="Poisson ratio, 0 to 0.5.")],
+    output: Annotated[Path, typer.Option("--output", "-o", help="Folder for netCDF and picture.")],
+    thickness: Annotated[str | None, typer.Option(help="Thickness of the gel, for instance '30 um'.")] = None,
+    frame: Annotated[str, typer.Option(help="Frame of a series.")] = "0",
+    reach: Annotated[str, typer.Option(help="Half-width of the map.")] = "100 um",
+    debug: Debug = False,
+) -> int:
+    """Energy of a second cell against its position and angle around a measured one."""
+    from tfm.gel import Gel
+    from tfm.population.commands import write_map
+    from tfm.units import parse_quantity
+
+    gel = Gel(
+        _option_quantity(youngs_modulus, "stress", "--youngs-modulus", parse_quantity),
+        _option_quantity(poisson, "dimensionless", "--poisson", parse_quantity),
+        None if thickness is None else _option_quantity(thickness, "length", "--thickness", parse_quantity),
+    )
+    width = _option_quantity(reach, "length", "--reach", parse_quantity)
+    for line in write_map(cells, field, cell, gel, output, frame=frame, reach=width):
+        _say(line)
+    return 0
+
+
+@app.command()
+def plan(
+    youngs_modulus: Annotated[str, typer.Option(help="Young's modulus with its unit, for instance '5 kPa'.")],
+    poisson: Annotated[str, typer.Option(help="Poisson ratio, 0 to 0.5.")],
+    pixel: Annotated[str, typer.Option(help="Pixel size, for instance '0.2 um'.")],
+    moment: Annotated[str, typer.Option(help="Contractile moment to expect, for instance '0.5 pN m'.")],
+    output: Annotated[Path, typer.Option("--output", "-o", help="Folder for table and figure.")],
+    thickness: Annotated[str | None, typer.Option(help="Thickness of the gel, for instance '30 um'.")] = None,
+    field_px: Annotated[int, typer.Option(min=64, help="Edge of the field in pixels.")] = 640,
+    bead_density: Annotated[float, typer.Option(help="Beads per square pixel.")] = 0.02,
+    photons: Annotated[float, typer.Option(help="Detected photons per bead and frame.")] = 500.0,
+    bead_sigma: Annotated[str, typer.Option(help="Standard deviation of a bead's image.")] = "0.25 um",
+    background: Annotated[float, typer.Option(help="Photons per pixel that come from no bead.")] = 10.0,
+    read_noise: Annotated[float, typer.Option(help="Photons per pixel, one standard deviation.")] = 1.5,
+    cell_length: Annotated[str, typer.Option(help="Length of the cell.")] = "40 um",
+    cell_width: Annotated[str, typer.Option(help="Width of the cell.")] = "16 um",
+    distance: Annotated[str | None, typer.Option(help="Between two such cells, for the pair energy.")] = None,
+    debug: Debug = False,
+) -> int:
+    """Before the experiment: the error bar to expect, the smallest dipole that shows, and what would help most."""
+    from tfm.gel import Gel
+    from tfm.population.commands import write_plan
+    from tfm.population.plan import Setup
+    from tfm.units import parse_quantity
+
+    def length(text: str, option: str) -> float:
+        return _option_quantity(text, "length", option, parse_quantity)
+
+    gel = Gel(
+        _option_quantity(youngs_modulus, "stress", "--youngs-modulus", parse_quantity),
+        _option_quantity(poisson, "dimensionless", "--poisson", parse_quantity),
+        None if thickness is None else length(thickness, "--thickness"),
+    )
+    size = length(pixel, "--pixel")
+    if not size > 0:
+        raise InputError(f"--pixel '{pixel}' is not above 0", code="bad-option", remedy="write for instance '0.2 um'")
+    setup = Setup(
+        gel=gel,
+        pixel_size=size,
+        field_px=field_px,
+        beads_per_area=bead_density / size**2,
+        photons=photons,
+        bead_sigma=length(bead_sigma, "--bead-sigma"),
+        background=background,
+        read_noise=read_noise,
+        cell_length=length(cell_length, "--cell-length"),
+        cell_width=length(cell_width, "--cell-width"),
+        contractile_moment=_option_quantity(moment, "energy", "--moment", parse_quantity),
+        distance=None if distance is None else length(distance, "--distance"),
+    )
+    _say("inventing cells of that size and measuring them; this takes about a minute")
+    for line in write_plan(setup, output, cells=2):
+        _say(line)
+    return 0
+
+
+@app.command()
+def beats(
+    folder: Annotated[Path, typer.Argument(help="Results folder of a run with time series.")],
+    output: Annotated[
+        Path | None, typer.Option("--output", "-o", help="Table to write; default: beats.csv in the folder.")
+    ] = None,
+    debug: Debug = False,
+) -> int:
+    """Beating cells: period, amplitude, rates of rise and relaxation; lag and coherence of two cells."""
+    from tfm.population.beat_table import write_beats
+
+    for line in write_beats(folder, output or folder / "beats.csv"):
+        _say(line)
     return 0
 
 

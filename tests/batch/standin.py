@@ -1,9 +1,8 @@
 """A stand-in for the numeric rooms, so that what is tested is the batch alone: quick, and able to misbehave on request.
 
-What a field does follows from its name: ``die`` kills its worker, ``dieonce`` does so the first time only, ``bug`` raises
-an error that nobody expects, ``bugonce`` does so the first time only, ``bad`` cannot be measured, ``hang`` stands still,
-``deaf`` does so and cannot be
-woken, ``slow`` takes a while.
+What a field does follows from its name: ``die`` kills its worker, ``dieonce`` does so the first time only, ``bug``
+raises an error that nobody expects, ``bugonce`` does so the first time only, ``bad`` cannot be measured, ``hang``
+stands still, ``deaf`` does so and cannot be woken, ``slow`` takes a while.
 """
 
 from __future__ import annotations

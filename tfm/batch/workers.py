@@ -226,7 +226,7 @@ def _on_dask(tasks: Sequence[Task], scheduler: str, work: Callable[[Task], Outco
             "--scheduler needs the extra 'cluster'", code="missing-extra", remedy="pip install 'tugtensor[cluster]'"
         ) from error
     try:
-        client = Client(scheduler, timeout=10)
+        client: Any = Client(scheduler, timeout=10)  # type: ignore[no-untyped-call]
     except (OSError, ValueError, TimeoutError) as error:
         raise InputError(
             f"no Dask scheduler answers at '{scheduler}' ({error})", code="no-scheduler", remedy="check the address"
