@@ -28,7 +28,7 @@ from tfm.traction.prior import first_moments
 __all__ = ["METHOD_EFFICIENCY", "ExpectedErrors", "Setup", "bead_information", "expected_errors", "improvements"]
 
 #: Share of the photon limit's information that the pixel method keeps (measured: ``bench_population.py plan``).
-METHOD_EFFICIENCY = 0.86
+METHOD_EFFICIENCY = 0.80
 
 _TRACE = np.array([-1.0, 0.0, -1.0])
 #: A dipole counts as detected from this many of its own standard deviations on.
