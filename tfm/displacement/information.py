@@ -103,10 +103,10 @@ def strip_information(
 
     Noise is treated as it is. Gradients are noisy, so g g^T of one frame overstates M; a product of the gradients of
     *different* frames does not, and is symmetrised. The score uses gradients smoothed over 1 px (an instrument in the
-    sense of estimating equations: it needs no unbiased gradient, only one that is independent of the residual), and
-    its variance uses the variance of **raw** pixels: interpolation lowers the variance of a pixel and correlates it with
-    its neighbours, and a sum against a smooth gradient sees neither. Noise in the gradient times noise in the residual adds
-    ``k/4`` per pixel, k being the sum of squares of the derivative's weights.
+    sense of estimating equations: it needs no unbiased gradient, only one that is independent of the residual), and its
+    variance uses the variance of **raw** pixels: interpolation lowers the variance of a pixel and correlates it with
+    its neighbours, and a sum against a smooth gradient sees neither. Noise in the gradient times noise in the residual
+    adds ``k/4`` per pixel, k being the sum of squares of the derivative's weights.
 
     Parameters
     ----------
@@ -159,8 +159,8 @@ def strip_information(
     def cut(image: NDArray[np.float32]) -> NDArray[np.float32]:
         return np.ascontiguousarray(image[keep], dtype=np.float32)
 
-    # Across frames the product is free of noise, but where beads do not overlap yet it can be negative, and a step goes
-    # the wrong way. Within a frame it is always a downhill step, only a little short: right on the way, wrong at the end.
+    # Across frames the product is free of noise, but where beads do not overlap yet it can be negative, and a step
+    # goes the wrong way. Within a frame a step is always downhill and a little short: right on the way, wrong at the end.
     other_a, other_b = (true_b, true_a) if final else (true_a, true_b)
     m = [weight * 0.5 * (soft_a[p] * other_a[q] + soft_b[p] * other_b[q]) for p, q in ((0, 0), (0, 1), (1, 0), (1, 1))]
     info = [m[0], 0.5 * (m[1] + m[2]), m[3]]
@@ -206,7 +206,7 @@ class _Backwards:
 
         A round spot of variance s^2 comes back with s^2 (1 - 2 e), e the strain, and the light of one spot divided by
         det F. Seen from the mean of both frames the difference is, to third order in e,
-        -(tr e) I - s^2 e_ij d_i d_j I. Left in, it is a noise of its own that photons do not explain: 0.03 px at e = 0.2.
+        -(tr e) I - s^2 e_ij d_i d_j I. Left in, it is a noise of its own that photons do not explain.
         """
         xx = correlate1d(mean, _SECOND, axis=1, mode="mirror")
         yy = correlate1d(mean, _SECOND, axis=0, mode="mirror")
@@ -232,7 +232,7 @@ def _nearest(mask: NDArray[np.bool_], at_y: NDArray[np.float32], at_x: NDArray[n
     y0 = np.clip(np.floor(at_y).astype(np.intp), 0, mask.shape[0] - 2)
     x0 = np.clip(np.floor(at_x).astype(np.intp), 0, mask.shape[1] - 2)
     four = mask[:-1, :-1] & mask[1:, :-1] & mask[:-1, 1:] & mask[1:, 1:]
-    return four[y0, x0]
+    return np.asarray(four[y0, x0])
 
 
 def _stray(
@@ -254,7 +254,7 @@ def _stray(
     spots = (np.abs(mean) > reject * noise) & (np.abs(mean) > 0.5 * brighter)
     if not spots.any():
         return spots
-    return gaussian_filter(spots.astype(np.float32), 1.5, truncate=2) > 0.02
+    return np.asarray(gaussian_filter(spots.astype(np.float32), 1.5, truncate=2) > 0.02)
 
 
 def _interpolated_variance(

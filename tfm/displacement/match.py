@@ -1,4 +1,4 @@
-"""Brightness of the stressed frame against the relaxed one, block by block, from frames that already lie on each other."""
+"""Brightness of the stressed frame against the relaxed one, block by block, from frames that already match."""
 
 from __future__ import annotations
 
@@ -35,7 +35,13 @@ class BrightnessSums:
         self.rows, self.columns = (_edges(n) for n in self.shape)
         self._sums = np.zeros((5, len(self.rows) - 1, len(self.columns) - 1))
 
-    def add(self, block_row: int, relaxed: NDArray[np.float32], warped: NDArray[np.float32], used: NDArray[np.bool_]) -> None:
+    def add(
+        self,
+        block_row: int,
+        relaxed: NDArray[np.float32],
+        warped: NDArray[np.float32],
+        used: NDArray[np.bool_],
+    ) -> None:
         """Take in the rows of one block row; both frames lightly smoothed, the second one brought back."""
         a, b = np.where(used, relaxed, 0), np.where(used, warped, 0)
         for k, part in enumerate((used.astype(np.float32), a, b, a * a, b * b)):

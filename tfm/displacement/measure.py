@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from collections.abc import Mapping
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,9 +13,14 @@ from tfm.displacement.model import DisplacementField
 from tfm.displacement.noise import vector_noise
 from tfm.displacement.piv import PivField, piv_start
 from tfm.displacement.prepare import PreparedFrame, prepare_frame
+from tfm.displacement.quality import bead_count, judge_quality
+from tfm.displacement.refine import RefinedField, refine_displacement
 from tfm.errors import InputError, MeasurementError
 
-__all__ = ["measure_displacement"]
+__all__ = ["measure_displacement", "quiet_nodes"]
+
+#: Beads that an affine window should hold: 6 unknowns against 2 x 20 coordinates.
+_BEADS_PER_WINDOW = 20.0
 
 
 def measure_displacement(
@@ -23,18 +29,71 @@ def measure_displacement(
     pixel_size: float,
     *,
     quiet: NDArray[np.bool_] | None = None,
-    spacing_px: int = 8,
+    spacing_px: int | None = None,
     mode: Literal["start", "full"] = "full",
     rotation: bool = False,
     magnification: bool = False,
     saturation: float | None = None,
 ) -> DisplacementField:
-    """Displacement of the beads from the relaxed to the stressed image, on a grid in the relaxed image's frame."""
-    frames = _checked(relaxed, stressed, pixel_size, quiet, saturation)
-    a, b = frames
+    """Displacement of the beads from the relaxed to the stressed image, on a grid in the relaxed image's frame.
+
+    A bead at ``x`` in the relaxed image sits at ``x + drift + u(x)`` in the stressed one (with rotation and
+    magnification, where asked for, taken out as well).
+
+    Parameters
+    ----------
+    relaxed, stressed
+        ``(ny, nx)`` bead images in counts, at least 48 px a side.
+    pixel_size
+        m.
+    quiet
+        ``(ny, nx)`` bool, True = ground away from cells. Drift and noise are measured there. ``None``: everywhere,
+        robustly.
+    spacing_px
+        Distance of the vectors; ``None`` = 8 for ``full``, 16 for ``start``. Smaller than the windows, so that
+        neighbours share pixels: see ``independent_area``.
+    mode
+        ``start``: window deformation from 128 to 32 px, fast, for methods that go on from the pixels. ``full``:
+        refined to the photon limit, with the precision of every vector.
+    rotation, magnification
+        Take a rotation and a change of scale between the frames out of ``u`` too.
+    saturation
+        Top of the camera's range in counts; ``None`` = recognised from the image.
+
+    Returns
+    -------
+    DisplacementField
+        With ``settings["quality"]`` (numbers of :class:`tfm.displacement.quality.FieldQuality`) and ``notes``.
+
+    Raises
+    ------
+    InputError
+        When the images differ in shape or are too small.
+    MeasurementError
+        When a frame is blank or the frames do not match.
+
+    Examples
+    --------
+    >>> from scipy.ndimage import gaussian_filter
+    >>> rng = np.random.default_rng(0)
+    >>> image = 4000 * gaussian_filter((rng.random((160, 164)) < 0.02).astype(float), 1.2)
+    >>> relaxed, stressed = (rng.poisson(part + 10.0) for part in (image[:, 4:], image[:, :-4]))
+    >>> field = measure_displacement(relaxed, stressed, 0.2e-6)
+    >>> bool(abs(field.drift[0] - 0.8e-6) < 5e-9), field.u.shape
+    (True, (2, 20, 20))
+    """
+    if mode not in ("start", "full"):
+        raise InputError(f"mode '{mode}'", code="bad-mode", remedy="use 'start' or 'full'")
+    a, b = _checked(relaxed, stressed, pixel_size, quiet, saturation)
     drift = estimate_drift(a.image, b.image, quiet=quiet, usable=a.usable & b.usable)
-    start = piv_start(a.image, b.image, shift=drift.shift, spacing_px=16 if mode == "full" else spacing_px)
-    return _from_start(start, drift, pixel_size, quiet, rotation, magnification)
+    spacing = spacing_px or (16 if mode == "start" else 8)
+    start = piv_start(a.image, b.image, shift=drift.shift, spacing_px=spacing if mode == "start" else 16)
+    if mode == "start":
+        return _from_start(start, (a, b), pixel_size, quiet, rotation, magnification)
+    beads = bead_count(a)[0] / max(1, int(a.usable.sum()))
+    radius = float(np.clip(0.6 * np.sqrt(_BEADS_PER_WINDOW / max(beads, 1e-9)), 12.0, 40.0))
+    refined = refine_displacement(a, b, start, spacing_px=spacing, radius=radius, quiet=quiet)
+    return _from_refined(refined, start, (a, b), pixel_size, quiet, rotation, magnification)
 
 
 def _checked(
@@ -76,33 +135,109 @@ def quiet_nodes(
 
 def _from_start(
     start: PivField,
-    drift: RigidMotion,
+    frames: tuple[PreparedFrame, PreparedFrame],
     pixel_size: float,
     quiet: NDArray[np.bool_] | None,
     rotation: bool,
     magnification: bool,
 ) -> DisplacementField:
     on_quiet, measured = quiet_nodes(start.x, start.y, quiet, start.valid)
-    grid_y, grid_x = np.meshgrid(start.y, start.x, indexing="ij")
+    motion = _motion(start.x, start.y, start.u, on_quiet, np.ones(on_quiet.shape), rotation, magnification)
+    u = start.u - motion.at(*np.meshgrid(start.x, start.y))
+    noise = vector_noise(u, on_quiet, max(1, int(np.ceil(32 / (start.x[1] - start.x[0])))))
+    # Windows of the start carry no covariance of their own; the scatter on quiet ground stands for all of them.
+    weight = np.where(start.valid, 1 / max(noise, 1e-6) ** 2 if np.isfinite(noise) else 0.0, 0.0)
+    precision = np.stack([weight, np.zeros_like(weight), weight])
+    return _field(start.x, start.y, u, precision, start.valid & (weight > 0), motion, noise, 32.0**2, frames,
+                  pixel_size, {**start.settings, "mode": "start"}, measured)  # fmt: skip
+
+
+def _from_refined(
+    refined: RefinedField,
+    start: PivField,
+    frames: tuple[PreparedFrame, PreparedFrame],
+    pixel_size: float,
+    quiet: NDArray[np.bool_] | None,
+    rotation: bool,
+    magnification: bool,
+) -> DisplacementField:
+    xx, xy, yy = refined.covariance
+    det = xx * yy - xy**2
+    precision = np.where(refined.valid, np.stack([yy, -xy, xx]) / det, 0.0)
+    on_quiet, measured = quiet_nodes(refined.x, refined.y, quiet, refined.valid)
+    weight = np.where(refined.valid, 2 / (xx + yy), 0.0)
+    motion = _motion(refined.x, refined.y, refined.u, on_quiet, weight, rotation, magnification)
+    u = refined.u - motion.at(*np.meshgrid(refined.x, refined.y))
+    spacing = refined.x[1] - refined.x[0]
+    apart = max(1, int(np.ceil(2 * refined.settings["window_radius_px"][0] / spacing)))
+    noise = vector_noise(u, on_quiet, apart)
+    if not np.isfinite(noise):
+        noise = float(np.sqrt(np.median(0.5 * (xx + yy)[on_quiet])))
+    trust = precision[0] + precision[2]
+    area = float(trust[refined.valid].sum() / (trust / refined.area)[refined.valid].sum())
+    settings = {**start.settings, **refined.settings, "mode": "full"}
+    return _field(refined.x, refined.y, u, precision, refined.valid, motion, noise, area, frames, pixel_size, settings,
+                  measured, lost=refined.lost)  # fmt: skip
+
+
+def _motion(
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    u: NDArray[np.float64],
+    on_quiet: NDArray[np.bool_],
+    weight: NDArray[np.float64],
+    rotation: bool,
+    magnification: bool,
+) -> RigidMotion:
     if on_quiet.sum() < 12:
         raise MeasurementError(
             "fewer than 12 vectors could be measured", code="no-match", remedy="check the bead images"
         )
-    motion = fit_rigid_motion(grid_x[on_quiet], grid_y[on_quiet], start.u[:, on_quiet], np.ones(int(on_quiet.sum())),
-                              rotation=rotation, magnification=magnification)  # fmt: skip
-    u = start.u - motion.at(grid_x, grid_y)
-    noise = vector_noise(u, on_quiet, max(1, round(32 / (start.x[1] - start.x[0]))))
-    weight = np.where(start.valid, 1 / max(noise, 1e-6) ** 2 if np.isfinite(noise) else 0.0, 0.0) / pixel_size**2
+    grid_x, grid_y = np.meshgrid(x, y)
+    return fit_rigid_motion(grid_x[on_quiet], grid_y[on_quiet], u[:, on_quiet], weight[on_quiet],
+                            rotation=rotation, magnification=magnification)  # fmt: skip
+
+
+def _field(
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    u: NDArray[np.float64],
+    precision: NDArray[np.float64],
+    valid: NDArray[np.bool_],
+    motion: RigidMotion,
+    noise: float,
+    area: float,
+    frames: tuple[PreparedFrame, PreparedFrame],
+    pixel: float,
+    settings: Mapping[str, Any],
+    measured: bool,
+    *,
+    lost: float = float("nan"),
+) -> DisplacementField:
+    """Pixels to metres, once."""
+    rejected = int((~valid).sum())
+    quality = judge_quality(*frames, noise_px=noise, rejected_share=rejected / valid.size,
+                            drift_px=float(np.hypot(*motion.shift)), lost_share=lost)  # fmt: skip
+    notes = quality.notes
+    if not measured:
+        notes += ("drift and noise were measured on the whole image: leave ground free of cells, or give outlines",)
+    motion_settings = {
+        "rotation_rad": motion.rotation,
+        "magnification": motion.magnification,
+        "rotation_centre_px": list(motion.centre),
+        "quiet_ground": measured,
+        "quality": quality.as_dict(),
+    }
     return DisplacementField(
-        x=start.x * pixel_size,
-        y=start.y * pixel_size,
-        u=u * pixel_size,
-        precision=np.stack([weight, np.zeros_like(weight), weight]),
-        valid=start.valid & (weight > 0),
-        drift=np.array(motion.shift) * pixel_size,
-        noise=noise * pixel_size,
-        independent_area=(32 * pixel_size) ** 2,
-        rejected=int((~start.valid).sum()),
-        settings={**start.settings, "mode": "start", "rotation_rad": motion.rotation,
-                  "magnification": motion.magnification, "quiet_ground": measured},
-    )  # fmt: skip
+        x=x * pixel,
+        y=y * pixel,
+        u=np.where(valid, u, np.nan) * pixel,
+        precision=np.where(valid, precision, 0.0) / pixel**2,
+        valid=valid,
+        drift=np.array(motion.shift) * pixel,
+        noise=noise * pixel,
+        independent_area=area * pixel**2,
+        rejected=rejected,
+        settings={**settings, **motion_settings},
+        notes=notes,
+    )

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -67,7 +69,7 @@ def camera_noise(
     shares = np.concatenate([np.linspace(0, 0.9, 10), 0.9 + 0.1 * np.linspace(0, 1, 11)[1:]])
     cuts = np.unique((shares * len(order)).astype(int))
     points = []
-    for low, high in zip(cuts[:-1], cuts[1:], strict=True):
+    for low, high in itertools.pairwise(cuts):
         pick = order[low:high]
         if len(pick) < 30:
             continue

@@ -1,8 +1,8 @@
 """Local polynomials through pixel information: displacement and covariance of every patch, all patches at once.
 
-Every pixel carries a 2x2 information matrix M and a vector h = M u (pixels, :mod:`tfm.displacement.information`). A patch
-fits a polynomial of order 1 or 2 to them by weighted least squares; its value at the node is the displacement. Sums
-over patches are separable, so they are products of small matrices and no loop over vectors exists. Weights fall as
+Every pixel carries a 2x2 information matrix M and a vector h = M u (:mod:`tfm.displacement.information`). A patch fits
+a polynomial of order 1 or 2 to them by weighted least squares; its value at the node is the displacement. Sums over
+patches are separable, so they are products of small matrices and no loop over vectors exists. Weights fall as
 (1 - x^2/R^2)(1 - y^2/R^2): for a given blur no other window leaves less noise (Epanechnikov, Theory Probab. Appl.
 14:153, 1969), and patches two radii apart share no pixel.
 """
@@ -42,12 +42,15 @@ class Patches:
         ``(ny, nx)`` bool.
     misfit
         ``(ny, nx)`` mean of squared residual over its expectation.
+    area
+        ``(ny, nx)`` px^2 of ground whose information equals that of the vector: precision over information per px^2.
     """
 
     u: NDArray[np.float64]
     covariance: NDArray[np.float64]
     valid: NDArray[np.bool_]
     misfit: NDArray[np.float64]
+    area: NDArray[np.float64]
 
 
 @dataclass
@@ -106,7 +109,8 @@ class PatchSums:
             return
         window_y = _windows(self.y[near], rows, self.radius, 2 * self.order)
         top = 2 * self.order
-        jobs = [("M", k, information[k], top, 1) for k in range(3)] + [("h", k, pull[k], self.order, 1) for k in range(2)]
+        jobs = [("M", k, information[k], top, 1) for k in range(3)]
+        jobs += [("h", k, pull[k], self.order, 1) for k in range(2)]
         if self.with_covariance:
             jobs += [("V", k, scatter[k], top, 2) for k in range(3)] + [("r", k, squares[k], 0, 1) for k in range(2)]
         for name, k, image, highest, power in jobs:
@@ -137,8 +141,8 @@ class PatchSums:
                         normal[:, 2 * a + c, 2 * b + d] = self._sums["M", c + d, i + k, j + m].ravel()
                         if self.with_covariance:
                             spread[:, 2 * a + c, 2 * b + d] = self._sums["V", c + d, i + k, j + m].ravel()
-        # Parameters are in px at the window's edge (coordinates are scaled by R). The weak prior on the slopes (30 px at
-        # the edge) only keeps empty patches from dividing by nothing.
+        # Parameters are in px at the window's edge (coordinates are scaled by R). The weak prior (30 px) only keeps
+        # empty patches from dividing by nothing.
         normal[:, np.arange(size), np.arange(size)] += 1e-3
         # Noise can leave the sums of an empty patch without a positive diagonal: such a patch knows nothing.
         ok = (normal[:, np.arange(size), np.arange(size)] > 2e-3).all(axis=1)
@@ -156,7 +160,12 @@ class PatchSums:
         if self.with_covariance:
             got, due = self._sums["r", 0, 0, 0], self._sums["r", 1, 0, 0]
             misfit = np.divide(got, due, out=misfit, where=due > 0).astype(np.float64)
-        return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit)
+        down = _windows(self.y, np.arange(self.shape[0]), self.radius, 0)[1][0].sum(axis=1)
+        weight = np.outer(down, self._columns[1][0].sum(axis=1))
+        density = (self._sums["M", 0, 0, 0] + self._sums["M", 2, 0, 0]) / weight
+        with np.errstate(divide="ignore", invalid="ignore"):
+            area = np.where(valid, (trace / det).reshape(shape) / density, np.nan)
+        return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit, area)
 
 
 def _windows(

@@ -14,7 +14,7 @@ from tfm.displacement.grid import fill_smoothly, node_axis, spline_matrix, to_pi
 from tfm.displacement.information import HALO, FramePair, strip_information
 from tfm.displacement.match import BrightnessSums
 from tfm.displacement.noise import camera_noise
-from tfm.displacement.patches import Patches, PatchSums, effective_area
+from tfm.displacement.patches import Patches, PatchSums
 from tfm.displacement.piv import PivField
 from tfm.displacement.prepare import PreparedFrame, bead_width
 
@@ -94,8 +94,8 @@ def refine_displacement(
 
     Each iteration brings the stressed frame back with the present field, gathers the information of every pixel and
     fits local polynomials to it (subset matching with local deformation; Sutton, Orteu & Schreier, Image Correlation,
-    Springer 2009, ch. 5, solved for all subsets in one step). Camera noise and brightness are measured from the residuals
-    on the way. Last, every node takes from three windows (affine; quadratic and wide; quadratic) the one of least
+    Springer 2009, ch. 5, solved for all subsets in one step). Camera noise and brightness are measured from the
+    residuals on the way. Last, every node takes from three windows (affine; quadratic and wide; quadratic) the one of least
     expected squared error, variance plus squared blur.
     """
     shape = relaxed.image.shape
@@ -118,7 +118,7 @@ def refine_displacement(
             break
     windows = [(x, y, radius, 1), (x, y, 1.25 * radius, 2), (x, y, radius, 2)]
     last = _sweep(pair, nodes, windows, _REJECT, quiet, with_covariance=True)
-    chosen = _choose(last.patches, [effective_area(radius), _quadratic_area(1.25 * radius), _quadratic_area(radius)])
+    chosen = _choose(last.patches)
     settings = {
         "refinement": "patches with local deformation",
         "window_radius_px": [radius, 1.25 * radius, radius],
@@ -137,12 +137,6 @@ def _shared_width(relaxed: PreparedFrame, stressed: PreparedFrame) -> float:
     return float(np.mean(widths)) if np.isfinite(widths).all() else 0.0
 
 
-def _quadratic_area(radius: float) -> float:
-    # The value at the centre of a quadratic patch is as noisy as an average over a smaller area; for this window the ratio
-    # of variances (uniform information) is 2.25.
-    return effective_area(radius) / 2.25
-
-
 def _sweep(
     pair: FramePair,
     nodes: _Nodes,
@@ -155,7 +149,7 @@ def _sweep(
     height, width = pair.relaxed.shape
     sums = [PatchSums(wx, wy, (height, width), radius, order, with_covariance) for wx, wy, radius, order in windows]
     brightness = BrightnessSums((height, width))
-    columns = spline_matrix(nodes.x, np.arange(width))
+    columns = spline_matrix(nodes.x, np.arange(width, dtype=np.float64))
     samples: list[NDArray[np.float32]] = []
     lost = used = 0
     thin = max(1, int(np.sqrt(height * width / 250_000)))
@@ -187,14 +181,14 @@ def _largest_move(before: _Nodes, now: _Nodes) -> float:
 
 
 def _choose(
-    patches: list[Patches], areas: list[float]
+    patches: list[Patches],
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.bool_], NDArray[np.float64], NDArray[np.float64]]:
     """At every node the window of least variance plus squared blur; the blur is measured against the last window."""
     sharp = patches[-1]
     best = np.full(sharp.valid.shape, np.inf)
     u, covariance = np.full_like(sharp.u, np.nan), np.full_like(sharp.covariance, np.nan)
     area, misfit = np.full_like(best, np.nan), np.full_like(best, np.nan)
-    for patch, own in zip(patches, areas, strict=True):
+    for patch in patches:
         blur = _squared_blur(patch, sharp) if patch is not sharp else np.zeros_like(best)
         total = np.where(patch.valid, patch.covariance[0] + patch.covariance[2] + blur, np.inf)
         better = total < best
@@ -204,6 +198,8 @@ def _choose(
         # Residuals above their expectation say that more than noise is at work: the variance grows with them.
         widened *= np.maximum(1, patch.misfit)
         covariance = np.where(better, widened, covariance)
+        # The vector carries the information of the ground that it is worth: less where blur widened its error.
+        own = patch.area * (patch.covariance[0] + patch.covariance[2]) / (widened[0] + widened[2])
         area, misfit = np.where(better, own, area), np.where(better, patch.misfit, misfit)
     valid = np.isfinite(best) & (misfit < 3)
     return np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, area, misfit
@@ -216,6 +212,4 @@ def _squared_blur(patch: Patches, sharp: Patches) -> NDArray[np.float64]:
     excess = np.where(both, ((patch.u - sharp.u) ** 2).sum(axis=0) - trace, 0.0)
     share = gaussian_filter(both.astype(float), 1.0)
     mean = gaussian_filter(excess, 1.0) / np.maximum(share, 1e-3)
-    noise = gaussian_filter(np.where(both, np.abs(trace), 0.0), 1.0) / np.maximum(share, 1e-3)
-    # Chance alone makes the mean of excess scatter by about half of the noise term; what does not rise above it is no blur.
-    return np.where(mean > 0.6 * noise, mean, 0.0)
+    return np.asarray(np.maximum(mean, 0.0))
