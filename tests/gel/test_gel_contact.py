@@ -96,5 +96,7 @@ def test_rigid_bond_solved_for_its_load():
         load = np.linalg.solve(np.block([[xx, xy], [xy, yy]]), np.repeat([1.0, 0.0], rows.size))
         radius = np.sqrt(rows.size / np.pi) * spacing  # of the disc with the area of the nodes
         errors.append(load[: rows.size].sum() * spacing**2 * (2 - poisson) / (8 * gel.shear_modulus * radius) - 1)
-    assert abs(errors[-1]) < 0.03
-    assert rates(sizes, errors) == pytest.approx(1.0, abs=0.4)
+    assert abs(errors[-1]) < 0.005
+    assert rates(sizes, errors) == pytest.approx(
+        1.2, abs=0.2
+    )  # first order in the radius, less what its choice takes off

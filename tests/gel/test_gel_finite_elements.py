@@ -35,12 +35,17 @@ def elements():
     facets = FacetBasis(mesh, ElementHex2(), facets=loaded, intorder=4)
     load = LinearForm(lambda v, _: v).assemble(facets)
     assert load.sum() == pytest.approx(HALF_WIDTH**2, rel=1e-12)
-    return basis, blocks, load
+    pull = [LinearForm(lambda v, w, axis=axis: -w.x[axis] / HALF_WIDTH * v).assemble(facets) for axis in range(2)]
+    return basis, blocks, {"sheared": (load, 0.0 * load), "contracting": tuple(pull)}
 
 
-def solve(elements, poisson):
-    """Displacement (u_x, u_y, u_z) at the nodes, for Young's modulus 1 and a traction of 1 along x."""
-    basis, blocks, load = elements
+def solve(elements, poisson, kind):
+    """Displacement (u_x, u_y, u_z) at the nodes for Young's modulus 1, and the load.
+
+    ``sheared``: a traction of 1 along x. ``contracting``: a cell whose traction is -(x, y) / half width, balanced.
+    """
+    basis, blocks, loads = elements
+    load_x, load_y = loads[kind]
     lame, shear = poisson / ((1 + poisson) * (1 - 2 * poisson)), 0.5 / (1 + poisson)
     laplace = blocks[0, 0] + blocks[1, 1] + blocks[2, 2]
     stiffness = sparse.bmat(
@@ -51,18 +56,20 @@ def solve(elements, poisson):
     ).tocsc()
     x, y, z = basis.doflocs
     far = (np.abs(z + THICKNESS) < 1e-9) | (x > LATERAL[-1] - 1e-9) | (y > LATERAL[-1] - 1e-9)
-    # The load is even in y and, pulling along x, makes u_y and u_z odd in x.
-    fixed = np.concatenate([far, far | (x < 1e-9) | (y < 1e-9), far | (x < 1e-9)])
-    force = np.concatenate([load, 0.0 * load, 0.0 * load])
+    if kind == "sheared":  # even in y, and u_y and u_z odd in x
+        fixed = np.concatenate([far, far | (x < 1e-9) | (y < 1e-9), far | (x < 1e-9)])
+    else:
+        fixed = np.concatenate([far | (x < 1e-9), far | (y < 1e-9), far])
+    force = np.concatenate([load_x, load_y, 0.0 * load_x])
     free = ~fixed
     out = np.zeros(force.size)
     out[free] = spsolve(stiffness[free][:, free], force[free])
-    return out.reshape(3, -1)
+    return out.reshape(3, -1), float(out @ force)
 
 
 @pytest.mark.parametrize("poisson", [0.3, 0.45])
 def test_traction_patch_on_a_layer_agrees_with_scikit_fem(elements, poisson):
-    field = solve(elements, poisson)
+    field, _ = solve(elements, poisson, "sheared")
     x, y, z = elements[0].doflocs
 
     nodes, margin = 21, 10  # nodes across the patch and beside it: their centres lie at 0, +-edge, ...
@@ -86,7 +93,7 @@ def test_traction_patch_on_a_layer_agrees_with_scikit_fem(elements, poisson):
 
 def test_the_comparison_can_tell_thickness_and_poisson_apart(elements):
     """The 2 % above means something: an infinitely thick gel or nu 0.1 lower would break it."""
-    field = solve(elements, 0.45)
+    field, _ = solve(elements, 0.45, "sheared")
     x, y, z = elements[0].doflocs
     (centre,) = np.flatnonzero((x == 0) & (y == 0) & (z == 0.0))
     (beside,) = np.flatnonzero((x == 0) & (y == 15) & (z == 0.0))
@@ -102,3 +109,25 @@ def test_the_comparison_can_tell_thickness_and_poisson_apart(elements):
     assert good == pytest.approx((field[0, centre], field[0, beside]), rel=0.02)
     assert abs(thick[1] / field[0, beside] - 1) > 0.3
     assert abs(lower[1] / field[0, beside] - 1) > 0.06
+
+
+@pytest.mark.parametrize("poisson", [0.3, 0.45])
+def test_contracting_cell_on_a_layer_agrees_with_scikit_fem(elements, poisson):
+    """A whole balanced cell: displacement in and around it, and the work of its traction (twice the strain energy)."""
+    field, quarter_work = solve(elements, poisson, "contracting")
+    x, y, z = elements[0].doflocs
+    nodes, margin = 41, 20
+    edge = 2 * HALF_WIDTH / nodes
+    axis = (np.arange(nodes + 2 * margin) - nodes // 2 - margin) * edge
+    inside = np.abs(axis) < HALF_WIDTH
+    cell = inside[:, None] & inside
+    traction = np.stack([-np.where(cell, axis, 0.0), -np.where(cell, axis[:, None], 0.0)]) / HALF_WIDTH
+    gel = Gel(1.0, poisson, THICKNESS)
+    ours = displacement(gel, traction, edge)
+    assert (traction * ours).sum() * edge**2 == pytest.approx(4 * quarter_work, rel=0.02)
+    largest = np.hypot(*ours).max()
+    for px, py in [(4, 0), (8, 0), (8, 8), (15, 0), (15, 15), (4, 15)]:
+        (at,) = np.flatnonzero((x == px) & (y == py) & (z == 0.0))
+        for component in range(2):
+            here = RegularGridInterpolator((axis, axis), ours[component], method="cubic")((py, px))
+            assert abs(here - field[component, at]) < 0.02 * largest

@@ -22,6 +22,7 @@ def test_public_names():
         "dipole_interaction_derivatives",
         "dipole_strain",
         "displacement",
+        "displacement_at",
         "fourier_response",
         "fourier_response_derivatives",
         "full_strain",

@@ -6,7 +6,17 @@ import numpy as np
 import pytest
 
 from tfm.errors import InputError
-from tfm.gel import Gel, dipole_strain, displacement, full_strain, strain_at, surface_strain, surface_tensor
+from tfm.gel import (
+    Gel,
+    dipole_strain,
+    displacement,
+    displacement_at,
+    full_strain,
+    node_kernel,
+    strain_at,
+    surface_strain,
+    surface_tensor,
+)
 
 GELS = [Gel(3.0, nu, h) for nu, h in ((0.0, None), (0.5, None), (0.4, 30.0), (0.3, 3.0), (0.45, 0.9), (0.5, 0.2))]
 
@@ -39,6 +49,19 @@ def test_strain_beside_the_load_is_the_difference_of_its_displacement(gel):
         expected = [by_x[0], 0.5 * (by_x[1] + by_y[0]), by_y[1]]
         ours = strain_at(gel, traction, spacing, x, y)
         np.testing.assert_allclose(ours, expected, rtol=0, atol=2e-6 * np.abs(expected).max())
+        moved = displacement_at(gel, traction, spacing, x, y)
+        np.testing.assert_allclose(moved, u(x, y), rtol=0, atol=1e-8 * np.abs(moved).max())
+
+
+@pytest.mark.parametrize("gel", GELS[:5], ids=str)
+def test_displacement_at_node_centres_is_that_of_the_lattice(gel):
+    traction, spacing = loads(), 1.3
+    on_lattice = displacement(gel, traction, spacing, kernel=node_kernel(gel, (5, 4), spacing, receiver="point"))
+    y, x = np.indices((5, 4)) * spacing + np.array([0.4, -2.0])[:, None, None]
+    at_points = displacement_at(gel, traction, spacing, x, y, origin=(-2.0, 0.4))
+    np.testing.assert_allclose(at_points, on_lattice, rtol=0, atol=1e-7 * np.abs(on_lattice).max())
+    corner = displacement_at(gel, traction, spacing, 0.5 * spacing, 0.5 * spacing)  # finite where strain is not
+    assert np.all(np.isfinite(corner))
 
 
 @pytest.mark.parametrize("gel", [*GELS[:4], Gel(3.0, 0.45, 1.9)], ids=str)

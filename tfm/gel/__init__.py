@@ -15,8 +15,9 @@ from tfm.gel.dipoles import (
 from tfm.gel.kernel import node_kernel, node_kernel_derivatives, node_strain_kernel
 from tfm.gel.model import Gel
 from tfm.gel.operator import SurfaceOperator, displacement
+from tfm.gel.points import displacement_at, strain_at
 from tfm.gel.response import fourier_response, fourier_response_derivatives
-from tfm.gel.strain import full_strain, strain_at, surface_strain
+from tfm.gel.strain import full_strain, surface_strain
 from tfm.gel.tensor import (
     surface_tensor,
     surface_tensor_derivatives,
@@ -33,6 +34,7 @@ __all__ = [
     "dipole_interaction_derivatives",
     "dipole_strain",
     "displacement",
+    "displacement_at",
     "fourier_response",
     "fourier_response_derivatives",
     "full_strain",

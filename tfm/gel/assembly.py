@@ -157,7 +157,7 @@ def _quadrant(quantity: Quantity, gel: Gel, ny: int, nx: int, spacing: float, re
     reach = 2 + int(np.ceil(min(CUTOFF * eta, float(max(ny, nx)))))  # offsets that the layer reaches at all
     order = next((order for least, order in _FILTERS if eta >= least), None)
     graded = eta < _GRADED
-    edge = _NEAR + 1 if order is None else max(FAR, int(np.ceil(1.5 * eta)))
+    edge = _NEAR + 1 if order is None else FAR
     near_y, near_x = min(ny, edge), min(nx, edge)
 
     def average(part: str, rows: slice, columns: slice) -> Array:
