@@ -58,8 +58,14 @@ def write_text(path: Path, text: str) -> None:
         temporary.write_text(text, encoding="utf-8", newline="")
         temporary.replace(path)
     except OSError as error:
-        temporary.unlink(missing_ok=True)
+        _forget(temporary)
         raise _storage(path, error) from error
+
+
+def _forget(temporary: Path) -> None:
+    """Take away what a failed write left, where anything was left."""
+    if temporary.is_file():
+        temporary.unlink()
 
 
 def _drawn(path: Path, draw: Any) -> None:
@@ -69,7 +75,7 @@ def _drawn(path: Path, draw: Any) -> None:
         draw(temporary)
         temporary.replace(path)
     except OSError as error:
-        temporary.unlink(missing_ok=True)
+        _forget(temporary)
         raise _storage(path, error) from error
 
 
