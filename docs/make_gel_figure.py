@@ -40,7 +40,7 @@ def distance_panel(axes: plt.Axes) -> None:
         axes.loglog(
             r, moved, color=shade, label="infinitely thick" if thickness is None else f"{thickness:.0f} µm thick"
         )
-    axes.set(xlabel="distance in front of a force (µm)", ylabel="displacement along it (µm per nN)", ylim=(1e-6, 0.1))
+    axes.set(xlabel="distance in front of the force (µm)", ylabel="displacement along it (µm per nN)", ylim=(1e-6, 0.1))
     axes.set_title("b  A thin gel cuts it off beyond h", loc="left")
     axes.legend(frameon=False, loc="lower left", title="E = 5 kPa, ν = 0.45", alignment="left")
 
@@ -56,7 +56,7 @@ def poisson_panel(axes: plt.Axes) -> None:
     axes.axvline(1 / 3, color="0.6", lw=0.8, ls=":", zorder=0)
     axes.text(1 / 3 + 0.008, 0.97, "ν = 1/3", transform=axes.get_xaxis_transform(), va="top", color="0.35")
     axes.set(xlabel="Poisson ratio", ylabel="interaction energy (fJ)", xlim=(0, 0.5))
-    axes.set_title("c  ν decides the sign of a pair's energy", loc="left")
+    axes.set_title("c  ν decides the sign of a pair", loc="left")
     axes.legend(
         frameon=False, loc=(0.01, 0.36), title="two dipoles of −1 pN m,\n40 µm apart, E = 5 kPa", alignment="left"
     )
@@ -66,15 +66,15 @@ def draw(path: Path) -> None:
     style = {
         "svg.hashsalt": "tfm",
         "svg.fonttype": "none",
-        "font.size": 9,
-        "axes.titlesize": 10,
+        "font.size": 8.5,
+        "axes.titlesize": 9,
         "axes.spines.top": False,
         "axes.spines.right": False,
-        "legend.fontsize": 8,
-        "legend.title_fontsize": 8,
+        "legend.fontsize": 7.5,
+        "legend.title_fontsize": 7.5,
     }
     with plt.rc_context(style):
-        figure, axes = plt.subplots(1, 3, figsize=(12.5, 4.0), layout="constrained")
+        figure, axes = plt.subplots(1, 3, figsize=(9.6, 3.9), layout="constrained")
         fourier_panel(axes[0])
         distance_panel(axes[1])
         poisson_panel(axes[2])

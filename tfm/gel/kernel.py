@@ -175,6 +175,12 @@ def node_kernel_derivatives(
     InputError
         As :func:`node_kernel`.
 
+    Notes
+    -----
+    ``displacement(gel, T, spacing, kernel=derivatives[1])`` is the derivative of the displacement with nu, and so on.
+    Those with nu are five-point differences of the layer's radial table (relative error near 1e-10), the others closed
+    forms of it.
+
     Examples
     --------
     >>> gel = Gel(1e3, 0.5)
