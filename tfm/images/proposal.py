@@ -31,11 +31,17 @@ Field = NDArray[np.float64]
 #: Standard deviations above which a spot is no noise: exp(-5^2 / 2) of 10^4 grid points is once in 30 fields, and three
 #: neighbours must agree.
 _ABOVE_NOISE = 5.0
-#: Part of the peak below which a spot is taken for the blur of a stronger one.
+#: A spot counts when its own peak is above this many: the errors of real vectors have longer tails than a Gaussian.
+_CERTAIN = 7.0
+#: Part of the peak nearby (within a square of this many grid points) below which pull is the blur of a stronger spot.
 _OF_PEAK = 0.15
+_REACH = 21
 #: |sum of pull| / sum of |pull| above which a spot cannot be a whole cell.
 _UNBALANCED = 0.35
-_NOTE = "outline proposed from the displacement, not drawn: give an outline for numbers to rely on"
+_NOTE = (
+    "outline proposed from the displacement, not drawn: a fainter cell may be missing and neighbours may be joined; "
+    "give an outline for numbers to rely on"
+)
 
 
 @dataclass
@@ -95,9 +101,10 @@ def propose_outline(
     overlap = 1.0 if independent_area is None else max(1.0, independent_area / spacing**2)
     pull, width, sd = _local_pull(filled, noise if math.isfinite(noise) else 0.0, overlap)
     size = np.hypot(*pull) / _border_gain(width, valid.shape)
-    core = size > max(_ABOVE_NOISE * sd, _OF_PEAK * float(size.max()))
+    # Blur reaches as far as the spots of one cell lie apart; a faint cell farther off is not measured by a strong one.
+    core = size > np.maximum(_ABOVE_NOISE * sd, _OF_PEAK * ndimage.maximum_filter(size, size=_REACH))
     core &= ndimage.binary_dilation(valid, iterations=2)
-    spots = _spots(core, pull, size)
+    spots = _spots(core, pull, size, least=_CERTAIN * sd)
     if not spots:
         raise _nothing()
     groups = _join_unbalanced(spots)
@@ -150,11 +157,11 @@ def _fill_gaps(component: Field, valid: NDArray[np.bool_]) -> Field:
 def _local_pull(u: Field, noise: float, overlap: float) -> tuple[Field, float, float]:
     """|k| u at the finest smoothing whose peak is clear of noise: ``(2, ny, nx)``, smoothing in grid steps, its sd."""
     for width in (1.0, 1.5, 2.2, 3.2):
-        pull, gain = _half_laplacian(u, width)
+        pull, gain = _half_laplacian(u, width, overlap)
         size = np.hypot(*pull) / _border_gain(width, u.shape[1:])
         # Away from the cells only noise is left, and a Rayleigh variable's median is 1.177 sd.
         measured = float(np.median(size)) / 1.1774
-        sd = max(noise * gain * math.sqrt(overlap), measured)
+        sd = max(noise * gain, measured)
         if float(size.max()) > 2.0 * _ABOVE_NOISE * sd:
             break
     return pull, width, sd
@@ -169,7 +176,7 @@ def _border_gain(width: float, shape: tuple[int, ...]) -> Field:
     return np.outer(gains[0], gains[1])
 
 
-def _half_laplacian(u: Field, width: float) -> tuple[Field, float]:
+def _half_laplacian(u: Field, width: float, overlap: float) -> tuple[Field, float]:
     ny, nx = u.shape[1:]
     py, px = ny // 2, nx // 2
     # A mirrored border has no jump, which |k| would turn into a spot.
@@ -186,17 +193,22 @@ def _half_laplacian(u: Field, width: float) -> tuple[Field, float]:
     scaled = np.stack([low_pass * (spectrum[0] + along * kx / safe), low_pass * (spectrum[1] + along * ky / safe)])
     pull = fft.irfft2(scaled, s=shape, axes=(1, 2))[:, py : py + ny, px : px + nx]
     full = 2.0 * np.pi * np.hypot(fft.fftfreq(256)[:, None], fft.fftfreq(256)[None, :])
-    # Mean square gain of one component of white noise: half longitudinal (weight 2), half transverse (weight 1).
-    gain = math.sqrt(2.5 * float(np.mean((full * np.exp(-0.5 * (full * width) ** 2)) ** 2)))
+    # Errors of overlapping windows are white noise smoothed over as many grid points as share their pixels: a Gaussian
+    # of s^2 = overlap / (4 pi) leaves the variance at 1 and the spectrum at overlap * exp(-k^2 s^2).
+    spectrum_of_noise = (
+        overlap * np.exp(-(full**2) * overlap / (4.0 * math.pi)) if overlap > 1.0 else np.ones_like(full)
+    )
+    # Mean square gain of one component: half longitudinal (weight 2), half transverse (weight 1).
+    gain = math.sqrt(2.5 * float(np.mean((full * np.exp(-0.5 * (full * width) ** 2)) ** 2 * spectrum_of_noise)))
     return pull, gain
 
 
-def _spots(core: NDArray[np.bool_], pull: Field, size: Field) -> list[_Spot]:
+def _spots(core: NDArray[np.bool_], pull: Field, size: Field, *, least: float) -> list[_Spot]:
     labels, count = ndimage.label(core, structure=np.ones((3, 3)))
     spots = []
     for number in range(1, count + 1):
         inside = labels == number
-        if np.count_nonzero(inside) >= 3:
+        if np.count_nonzero(inside) >= 3 and float(size[inside].max()) > least:
             spots.append(_Spot(np.argwhere(inside), pull[:, inside].sum(axis=1), float(size[inside].sum())))
     return spots
 
