@@ -124,3 +124,12 @@ def test_a_cell_without_outline_is_listed_although_its_field_is_ok(
     assert "plate-001" not in look
     # The bytes are no longer those of the record, and the page says so.
     assert "the outputs of 2 of these were verified" in text
+
+
+def test_several_processes_draw_the_same(make_folder: Callable[..., Path], tmp_path: Path) -> None:
+    one, two = (make_folder(tmp_path / name / "results", fields=4, bad=1) for name in ("one", "two"))
+    build_report(one)
+    build_report(two, workers=2)
+    for path in sorted(one.glob("figures/**/*.*")):
+        assert path.read_bytes() == (two / path.relative_to(one)).read_bytes()
+    assert (one / "report.html").read_bytes() == (two / "report.html").read_bytes()

@@ -6,8 +6,7 @@ import numpy as np
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 from scipy.interpolate import RegularGridInterpolator
-from scipy.ndimage import distance_transform_edt
-from scipy.ndimage import shift as shift_image
+from scipy.ndimage import distance_transform_edt, map_coordinates
 
 from tfm.report import plots
 from tfm.report.fielddata import FieldArrays
@@ -53,13 +52,12 @@ def beads_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
     drift = [number(row, k) for k in ("drift_y_px", "drift_x_px")]
     step, camera = float(a.xi[1] - a.xi[0]), a.camera_pixel or float(a.xi[1] - a.xi[0])
     moved = [(d or 0.0) * camera / step for d in drift]
-    settled = shift_image(a.stressed, [-d for d in moved], order=1, mode="nearest")
     stated = "unknown" if drift[0] is None or drift[1] is None else f"{drift[1]:+.2f}, {drift[0]:+.2f} px"
     quiet, busy = _quiet_and_busy(a)
     views = (
-        (a.stressed, quiet, f"Quiet ground as recorded (drift {stated})"),
-        (settled, quiet, "Quiet ground, drift taken out"),
-        (settled, busy, "Where the gel moved most"),
+        (False, quiet, f"Quiet ground as recorded (drift {stated})"),
+        (True, quiet, "Quiet ground, drift taken out"),
+        (True, busy, "Where the gel moved most"),
     )
     half = min(_HALF, *(s // 2 for s in a.relaxed.shape))
     parts = [(_window(a.yi, y, half), _window(a.xi, x, half)) for _, (x, y), _ in views]
@@ -69,8 +67,11 @@ def beads_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
         for r, c in parts
     ]
     panels = Panels.row(limits, [title for _, _, title in views], bars=False)
-    for ax, (r, c), (image, _, _) in zip(panels.axes, parts, views, strict=True):
-        plots.draw_overlay(ax, a.xi[c], a.yi[r], a.relaxed[r, c], image[r, c])
+    for ax, (r, c), (settled, _, _) in zip(panels.axes, parts, views, strict=True):
+        # Beads of the stressed frame have drifted by ``moved``: read it there, and only where it is shown.
+        at = [np.arange(s.start, s.stop) + (d if settled else 0.0) for s, d in zip((r, c), moved, strict=True)]
+        image = map_coordinates(a.stressed, np.meshgrid(*at, indexing="ij"), order=1, mode="nearest")
+        plots.draw_overlay(ax, a.xi[c], a.yi[r], a.relaxed[r, c], image)
     words = (("● relaxed", "#ff9c2b"), ("● stressed", "#6aa8ff"), ("● both agree", "#ffffff"))
     for i, (word, colour) in enumerate(words):
         panels.axes[0].text(

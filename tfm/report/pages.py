@@ -5,6 +5,9 @@ from __future__ import annotations
 import hashlib
 import re
 from collections.abc import Mapping, Sequence
+from concurrent.futures import ProcessPoolExecutor
+from functools import partial
+from multiprocessing import get_context
 from pathlib import Path
 from typing import Any
 
@@ -60,7 +63,7 @@ def _environment() -> Environment:
     return found
 
 
-def build_report(results_dir: Path, *, redo: bool = False) -> Path:
+def build_report(results_dir: Path, *, redo: bool = False, workers: int = 1) -> Path:
     """Write ``report.html`` and ``figures/`` of a results folder, from nothing but that folder.
 
     Parameters
@@ -69,6 +72,8 @@ def build_report(results_dir: Path, *, redo: bool = False) -> Path:
         A folder that ``tfm run`` wrote, finished or not.
     redo
         Draw all pictures anew; by default a picture whose data did not change is kept.
+    workers
+        Processes that draw; the report is the same for any number.
 
     Returns
     -------
@@ -82,7 +87,7 @@ def build_report(results_dir: Path, *, redo: bool = False) -> Path:
     """
     results = read_results(Path(results_dir))
     root, environment = results.root, _environment()
-    drawn = {f.name: draw_field(root, f, redo=redo) for f in results.fields}
+    drawn = _draw_all(results, redo=redo, workers=workers)
     css = _template(environment, "style.css")
     write_bytes(root / "figures" / "page.css", css.encode())
     page = environment.get_template("field.html")
@@ -98,6 +103,15 @@ def build_report(results_dir: Path, *, redo: bool = False) -> Path:
         )
         write_bytes(root / "figures" / field.folder / "index.html", text.encode())
     return write_bytes(root / "report.html", _index(results, drawn, environment, css).encode())
+
+
+def _draw_all(results: Results, *, redo: bool, workers: int) -> dict[str, Pictures]:
+    """Pictures of every field, in this process or in several."""
+    job = partial(draw_field, results.root, redo=redo)
+    if workers <= 1 or len(results.fields) < 2 * workers:
+        return {f.name: job(f) for f in results.fields}
+    with ProcessPoolExecutor(workers, mp_context=get_context("forkserver")) as pool:
+        return dict(zip((f.name for f in results.fields), pool.map(job, results.fields, chunksize=4), strict=True))
 
 
 def _template(environment: Environment, name: str) -> str:

@@ -13,14 +13,31 @@
   let decisions = Object.assign({}, data.decisions), storage = true;
   try { decisions = Object.assign(decisions, JSON.parse(localStorage.getItem(key) || "{}")); } catch { storage = false; }
   const remember = () => { if (storage) { try { localStorage.setItem(key, JSON.stringify(decisions)); } catch { storage = false; } } };
+  // A thousand menus make a page slow: a row gets its own when it comes near the window.
+  const equip = (row) => {
+    const cell = row.querySelector(".choice");
+    if (cell.firstChild) return;
+    const menu = document.createElement("select"), note = document.createElement("input");
+    for (const word of ["", "keep", "exclude"]) menu.add(new Option(word || "—", word));
+    menu.setAttribute("aria-label", "Decision for " + row.dataset.field);
+    note.setAttribute("aria-label", "Note on " + row.dataset.field);
+    note.placeholder = "note";
+    cell.append(menu, note);
+    paint(row);
+  };
+  const near = new IntersectionObserver((seen) => {
+    for (const s of seen) if (s.isIntersecting) { near.unobserve(s.target); equip(s.target); }
+  }, { rootMargin: "1200px" });
   const paint = (row) => {
     const d = decisions[row.dataset.field] || {}, cell = row.querySelector(".choice");
-    cell.querySelector("select").value = d.decision || "";
-    cell.querySelector("input").value = d.note || "";
+    if (cell.firstChild) {
+      cell.querySelector("select").value = d.decision || "";
+      cell.querySelector("input").value = d.note || "";
+    }
     row.dataset.decision = d.decision || "none";
     row.classList.toggle("excluded", d.decision === "exclude");
   };
-  rows.forEach(paint);
+  rows.forEach((row) => { paint(row); near.observe(row); });
   body.addEventListener("change", (event) => {
     const row = event.target.closest("tr");
     if (!row || !event.target.closest(".choice")) return;
