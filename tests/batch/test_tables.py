@@ -45,12 +45,10 @@ def test_columns_are_the_agreed_ones_and_each_is_explained(name: str, columns: t
     assert list(said) == [*names, "donor"]
     for column in names:
         assert len(said[column]["meaning"]) > 10
-        assert (
-            bool(said[column]["unit"])
-            == column.rsplit("_", 1)[-1]
-            in (["s", "um", "um2", "deg", "pNm", "pNm2", "nN", "fJ", "Pa", "pN", "fNm", "px"] if "_" in column else [])
-            or not said[column]["unit"]
+        has_suffix = (
+            column.rsplit("_", 1)[-1] in {*["s", "um", "um2", "deg", "pNm", "pNm2", "nN", "fJ", "Pa", "pN", "fNm", "px"]} and "_" in column
         )
+        assert bool(said[column]["unit"]) is has_suffix, column
 
 
 def test_unmeasured_is_empty_and_never_a_word() -> None:
