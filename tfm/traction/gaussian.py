@@ -53,6 +53,9 @@ class LinearData:
         Labels that balance together; a group that is cut by the image's edge is absent.
     nuisance
         Which motions of the stressed frame are estimated: ``offset`` (always), ``rotation``, ``scale``.
+    weighted
+        ``(2, N)`` 1/m: precision times value where it is known better than the value itself (a patch whose precision
+        cannot be inverted still pulls); None = multiply them.
     """
 
     lattice: Lattice
@@ -63,6 +66,14 @@ class LinearData:
     precision: NDArray[np.float64]
     groups: tuple[tuple[int, ...], ...]
     nuisance: tuple[str, ...] = ("offset",)
+    weighted: NDArray[np.float64] | None = None
+
+    @property
+    def push(self) -> NDArray[np.float64]:
+        """``(2 N,)`` 1/m: precision times value, all x then all y."""
+        if self.weighted is not None:
+            return self.weighted.reshape(-1)
+        return _weigh(self.precision, self.value.reshape(-1))
 
 
 @dataclass(frozen=True)
@@ -223,10 +234,10 @@ def normal_equations(data: LinearData, gel: Gel, *, response: NDArray[np.float64
         response = response_matrix(data, kernel)
     z = nuisance_columns(data)
     d = data.value.reshape(-1)
-    px, pz, pd = (_weigh(data.precision, block) for block in (response, z, d))
-    information, score, energy = response.T @ px, px.T @ d, float(d @ pd)
+    px, pz, pd = _weigh(data.precision, response), _weigh(data.precision, z), data.push
+    information, score, energy = response.T @ px, response.T @ pd, float(d @ pd)
     # Eliminate the motions of the frame: their flat prior leaves the Schur complement.
-    zz, zx, zd = z.T @ pz, pz.T @ response, pz.T @ d
+    zz, zx, zd = z.T @ pz, pz.T @ response, z.T @ pd
     solved = linalg.solve(zz, np.column_stack([zd, zx]), assume_a="sym")
     information -= zx.T @ solved[:, 1:]
     score -= zx.T @ solved[:, 0]
@@ -326,12 +337,21 @@ def _strengthen(
 
 
 def fixed_posterior(
-    data: LinearData, normal: NormalEquations, components: Sequence[Component], *, amplitude_factor: float = 1.0
+    data: LinearData,
+    normal: NormalEquations,
+    components: Sequence[Component],
+    *,
+    amplitude_factor: float = 1.0,
+    priors: dict[tuple[str, float], tuple[CellPrior, ...]] | None = None,
 ) -> Solution:
     """Posterior with lengths, shapes, amplitudes (times a factor) and weights taken over from ``components``."""
     found = []
+    cache = {} if priors is None else priors
     for c in components:
-        prior = make_prior(data.basis, data.lattice, length=c.length, shape=c.shape)
+        key = (c.shape, c.length)
+        if key not in cache:
+            cache[key] = make_prior(data.basis, data.lattice, length=c.length, shape=c.shape)
+        prior = cache[key]
         amplitudes = c.amplitudes * amplitude_factor
         mean, covariance, log_evidence, _ = posterior(normal, prior, amplitudes)
         found.append(replace(c, amplitudes=amplitudes, mean=mean, covariance=covariance, log_evidence=log_evidence))

@@ -15,19 +15,39 @@ from numpy.typing import NDArray
 from scipy import ndimage
 
 from tfm.displacement.model import DisplacementField
-from tfm.errors import MeasurementError
+from tfm.errors import ConvergenceError, MeasurementError
 from tfm.gel import Gel, displacement, node_kernel
 from tfm.images.model import Outlines
 from tfm.traction.blocks import Blocks, make_blocks
 from tfm.traction.bounded import choose_step, solve, vector_data, whole_groups
-from tfm.traction.gaussian import LinearData, nuisance_columns, response_matrix
+from tfm.traction.gaussian import (
+    LinearData,
+    Solution,
+    fixed_posterior,
+    normal_equations,
+    nuisance_columns,
+    response_matrix,
+)
 from tfm.traction.lattice import Lattice, cover_outlines, image_lattice, make_nodes
 from tfm.traction.model import TractionField
 from tfm.traction.prior import CellPrior
 from tfm.traction.result import lattice_traction, make_result
-from tfm.traction.warp import FramePair, NoiseModel, PixelTerms, fit_noise, pixel_terms, prepare_pair, resample_matrix
+from tfm.traction.warp import (
+    FramePair,
+    NoiseModel,
+    PixelTerms,
+    bead_width,
+    fit_noise,
+    pixel_terms,
+    prepare_pair,
+    resample_matrix,
+    rigid_beads,
+)
 
 __all__ = ["infer_image"]
+
+#: Coefficients while the images are being aligned; the last steps are taken on finer nodes.
+COARSE = 700
 
 
 @dataclass
@@ -49,10 +69,18 @@ class _Loop:
     quiet: NDArray[np.bool_]
     up_y: NDArray[np.float32]
     up_x: NDArray[np.float32]
+    quiet_pixels: NDArray[np.bool_]
+    priors: dict[tuple[str, float], tuple[CellPrior, ...]]
 
-    def pixel_displacement(self, mean: NDArray[np.float64], motion: NDArray[np.float64]) -> NDArray[np.float32]:
-        """``(2, NY, NX)`` px: drift + motions of the frame + elastic displacement, at every pixel."""
+    def pixel_displacement(
+        self, mean: NDArray[np.float64], motion: NDArray[np.float64], spread: float
+    ) -> NDArray[np.float32]:
+        """``(2, NY, NX)`` px: drift + motions of the frame + elastic displacement, at every pixel.
+
+        ``spread`` (px^2) corrects for beads that move as a whole, see :func:`tfm.traction.warp.rigid_beads`.
+        """
         u = displacement(self.gel, lattice_traction(self.data, mean), self.lattice.spacing, kernel=self.kernel)
+        u = rigid_beads(u, spread / self.b**2)
         x = (np.arange(self.lattice.shape[1]) - 0.5 * (self.lattice.shape[1] - 1)) * self.lattice.spacing
         y = (np.arange(self.lattice.shape[0]) - 0.5 * (self.lattice.shape[0] - 1))[:, None] * self.lattice.spacing
         extra = list(motion[2:])
@@ -99,16 +127,20 @@ def _linearise(
     efficiency = float((j[0] + j[2])[kept].sum() / (v[0] + v[2])[kept].sum()) / scale
     weight = efficiency * kept
     now = (loop.response @ mean + loop.motions @ motion).reshape(2, -1)
+    weighted = s * weight / loop.pixel
     jdet = j[0] * j[2] - j[1] ** 2
     solid = kept & (jdet > 1e-3 * (j[0] + j[2]) ** 2) & (j[0] > 0)
     safe = np.where(solid, jdet, 1.0)
     shift = np.stack([j[2] * s[0] - j[1] * s[1], j[0] * s[1] - j[1] * s[0]]) / safe * solid
-    # A block whose sensitivity cannot be inverted still counts in the information, with no news of its own.
     precision = j * weight / loop.pixel**2
+    # Precision times value is the score, also where the sensitivity of a block cannot be inverted.
+    weighted = weighted + np.stack(
+        [precision[0] * now[0] + precision[1] * now[1], precision[1] * now[0] + precision[2] * now[1]]
+    )
     near = kept & (loop.blocks.distance <= 6e-6 / loop.lattice.spacing)
     used = near if near.sum() > 20 else kept
     misfit = float(chi[used].sum() / (2.0 * used.sum())) / scale
-    data = replace(loop.data, value=now + shift * loop.pixel, precision=precision)
+    data = replace(loop.data, value=now + shift * loop.pixel, precision=precision, weighted=weighted)
     return _Step(data, terms, scale, efficiency, misfit, int(filled.sum() - kept.sum()))
 
 
@@ -137,7 +169,7 @@ def infer_image(
     start: DisplacementField,
     previous: TractionField | None = None,
     nuisance: tuple[str, ...] = ("offset",),
-    most_coefficients: int = 1100,
+    most_coefficients: int = 1600,
     most_steps: int = 20,
     tolerance: float = 0.02,
 ) -> TractionField:
@@ -180,63 +212,111 @@ def infer_image(
     began = time.perf_counter()
     lattice, b = image_lattice(relaxed.shape, pixel_size)
     covered = cover_outlines(lattice, outlines.labels, pixel_size)
-    basis = make_nodes(covered, step=choose_step(covered, most=most_coefficients))
     groups, cut = whole_groups(covered)
-    begin = vector_data(start, lattice, basis, covered, groups=groups, nuisance=nuisance)
-    priors: dict[tuple[str, float], tuple[CellPrior, ...]] = {}
-    if previous is not None and previous.solution is not None and previous.data is not None and (
-        previous.solution.mean.size == 2 * basis.size
-    ):  # fmt: skip
-        solution = previous.solution
-        solution = replace(solution, nuisance=np.zeros_like(solution.nuisance))
-    else:
-        solution, _ = solve(begin, gel, priors=priors, tolerance=0.3)
+    coarse = make_nodes(covered, step=choose_step(covered, most=min(most_coefficients, COARSE)))
+    begin = vector_data(start, lattice, coarse, covered, groups=groups, nuisance=nuisance)
     loop = _make_loop(relaxed, stressed, pixel_size, gel, lattice, b, covered, begin, start.drift)
-    noise = NoiseModel(0.0, 1.0)
-    functionals = _dipole_rows(begin)
-    history: list[float] = []
-    converged = False
-    dipole = functionals @ solution.mean
-    for step_number in range(1, most_steps + 1):
-        u = loop.pixel_displacement(solution.mean, solution.nuisance)
-        # Wide gradients first: they pull a start that is a bead's width away; then the bead's own width.
-        smoothing = 2.0 if step_number == 1 else 1.0
+    state = _begin(loop, begin, previous)
+    state = _settle(loop, state, tolerance=5.0 * tolerance, most_steps=most_steps, fine=False)
+    step = choose_step(covered, most=most_coefficients)
+    if step != coarse.step:
+        basis = make_nodes(covered, step=step)
+        data = replace(loop.data, basis=basis)
+        loop = replace(loop, data=data, response=response_matrix(data, loop.kernel), priors={})
+        state = _carry_over(loop, state)
+    state = _settle(loop, state, tolerance=tolerance, most_steps=most_steps, fine=True)
+    step_data, solution = state.step, state.solution
+    if step_data is None:
+        raise ConvergenceError("the pixel method took no step", code="no-step", remedy="allow at least one step")
+    notes = list(start.notes)
+    if not state.converged:
+        notes.append(
+            f"the pixel method did not settle: the last step moved a dipole by {state.moves[-1]:.2f} of its standard deviation"
+        )
+    if step_data.misfit > 2.0:
+        notes.append(
+            f"the images are not explained under the cell (misfit {step_data.misfit:.1f}, expected 1): check outline, focus and gel"
+        )
+    statistics = {
+        "steps": len(state.moves), "converged": state.converged, "last_move_sd": state.moves[-1],
+        "noise_gain": state.noise.gain, "noise_floor": state.noise.floor, "noise_scale": step_data.scale,
+        "efficiency": step_data.efficiency, "blocks_rejected": step_data.rejected, "bead_sigma_px": state.width, "block_px": b,
+        "seconds": time.perf_counter() - began,
+    }  # fmt: skip
+    return make_result(
+        step_data.data, gel, covered, solution, method="image", misfit=step_data.misfit, cut=cut, notes=tuple(notes),
+        statistics=statistics,
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _State:
+    """Where Gauss-Newton stands."""
+
+    solution: Solution
+    noise: NoiseModel
+    width: float
+    step: _Step | None
+    moves: tuple[float, ...]
+    converged: bool
+
+
+def _begin(loop: _Loop, begin: LinearData, previous: TractionField | None) -> _State:
+    """Start from the frame before where it has the same nodes, else from the vectors."""
+    size = 2 * begin.basis.size
+    if previous is not None and previous.solution is not None and previous.data is not None:
+        if previous.solution.mean.size == size and np.array_equal(previous.labels, loop.covered):
+            still = replace(previous.solution, nuisance=np.zeros_like(previous.solution.nuisance))
+            return _State(still, NoiseModel(0.0, 1.0), 1.3, None, (), False)
+    solution, _ = solve(begin, loop.gel, priors=loop.priors, tolerance=0.3, search=False)
+    return _State(solution, NoiseModel(0.0, 1.0), 1.3, None, (), False)
+
+
+def _carry_over(loop: _Loop, state: _State) -> _State:
+    """The same traction on finer nodes: the prior's strength stays, the posterior is taken anew from the last images."""
+    if state.step is None:
+        return state
+    data = replace(
+        loop.data, value=state.step.data.value, precision=state.step.data.precision, weighted=state.step.data.weighted
+    )
+    normal = normal_equations(data, loop.gel, response=loop.response)
+    solution = fixed_posterior(data, normal, state.solution.components, priors=loop.priors)
+    return replace(state, solution=solution, moves=(*state.moves, np.inf))
+
+
+def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fine: bool) -> _State:
+    """Gauss-Newton until no dipole moves by more than ``tolerance`` of its standard deviation."""
+    functionals = _dipole_rows(loop.data)
+    dipole = functionals @ state.solution.mean
+    first = len(state.moves)
+    while len(state.moves) < most_steps:
+        number = len(state.moves) + 1
+        spread = 0.0 if number <= 2 else 1.0 / (1.0 / state.width**2 + 1.0 / (state.width**2 + 1.0))
+        u = loop.pixel_displacement(state.solution.mean, state.solution.nuisance, spread)
+        # Wide gradients first: they pull a start that is a bead's width away; then about the bead's own width.
         terms = pixel_terms(
-            loop.pair, u[0], u[1], b=b, shape=lattice.shape, smoothing=smoothing, noise=noise,
-            outlier_sigma=np.inf if step_number <= 2 else 6.0,
+            loop.pair, u[0], u[1], b=loop.b, shape=loop.lattice.shape, smoothing=2.0 if number == 1 else 1.0,
+            noise=state.noise, outlier_sigma=np.inf if number <= 2 else 6.0,
         )  # fmt: skip
-        if step_number <= 4:
-            noise = fit_noise(terms, _quiet_pixels(loop, relaxed.shape))
-        step = _linearise(loop, terms, solution.mean, solution.nuisance, robust=step_number > 2)
+        if number == 2:
+            state = replace(state, width=bead_width(loop.pair, terms.carried, terms.weight))
+        if number <= 4:
+            state = replace(state, noise=fit_noise(terms, loop.quiet_pixels))
+        step = _linearise(loop, terms, state.solution.mean, state.solution.nuisance, robust=number > 2)
         # The prior's strength follows roughly until the displacement has settled, then exactly, lengths included.
-        settled = step_number > 3 and history[-1] < 4.0 * tolerance
+        near_end = not fine and len(state.moves) > first and state.moves[-1] < 5.0 * tolerance
         solution, _ = solve(
-            step.data, gel, start=solution.components, response=loop.response, priors=priors,
-            tolerance=0.03 if settled else 0.3, search=settled,
+            step.data, loop.gel, start=state.solution.components, response=loop.response, priors=loop.priors,
+            tolerance=0.05 if near_end or fine else 0.5, search=near_end,
         )  # fmt: skip
         new = functionals @ solution.mean
         sd = np.sqrt(np.einsum("ij,jk,ik->i", functionals, solution.covariance, functionals))
-        history.append(float(np.max(np.abs(new - dipole) / sd)))
+        move = float(np.max(np.abs(new - dipole) / sd))
         dipole = new
-        if settled and history[-1] < tolerance:
-            converged = True
-            break
-    notes = list(start.notes)
-    if not converged:
-        notes.append(f"the pixel method did not settle: last step moved a dipole by {history[-1]:.2f} of its standard deviation")
-    if step.misfit > 2.0:
-        notes.append(
-            f"the images are not explained under the cell (misfit {step.misfit:.1f}, expected 1): check outline, focus and gel"
-        )
-    statistics = {
-        "steps": len(history), "converged": converged, "last_move_sd": history[-1], "noise_gain": noise.gain,
-        "noise_floor": noise.floor, "noise_scale": step.scale, "efficiency": step.efficiency, "blocks_rejected": step.rejected,
-        "seconds": time.perf_counter() - began, "block_px": b,
-    }  # fmt: skip
-    return make_result(
-        step.data, gel, covered, solution, method="image", misfit=step.misfit, cut=cut, notes=tuple(notes),
-        statistics=statistics, offset_before=np.asarray(solution.nuisance[:2]),
-    )  # fmt: skip
+        state = replace(state, solution=solution, step=step, moves=(*state.moves, move))
+        if move < tolerance and (fine or near_end) and number > 3:
+            return replace(state, converged=True)
+    return replace(state, converged=False)
 
 
 def _make_loop(
@@ -254,18 +334,19 @@ def _make_loop(
         prepare_pair(np.asarray(relaxed, np.float32), np.asarray(stressed, np.float32)), lattice, b, pixel, gel, covered, blocks,
         data, kernel, response_matrix(data, kernel), nuisance_columns(data), drift, quiet,
         resample_matrix(relaxed.shape[0], lattice.shape[0], b), resample_matrix(relaxed.shape[1], lattice.shape[1], b),
+        _quiet_pixels(covered, lattice, b, relaxed.shape), {},
     )  # fmt: skip
 
 
-def _quiet_pixels(loop: _Loop, shape: tuple[int, int]) -> NDArray[np.bool_]:
-    far = ndimage.distance_transform_edt(loop.covered == 0) * loop.lattice.spacing > 5e-6
+def _quiet_pixels(covered: NDArray[np.int32], lattice: Lattice, b: int, shape: tuple[int, int]) -> NDArray[np.bool_]:
+    far = ndimage.distance_transform_edt(covered == 0) * lattice.spacing > 5e-6
     if far.sum() < 100:
-        far = loop.covered == 0
+        far = covered == 0
     if far.sum() < 20:
         raise MeasurementError(
             "the outlines leave no ground in the image to measure the noise on", code="no-ground",
             remedy="image a larger field or draw tighter outlines",
         )  # fmt: skip
-    rows = np.minimum(np.arange(shape[0]) // loop.b, loop.lattice.shape[0] - 1)
-    columns = np.minimum(np.arange(shape[1]) // loop.b, loop.lattice.shape[1] - 1)
+    rows = np.minimum(np.arange(shape[0]) // b, lattice.shape[0] - 1)
+    columns = np.minimum(np.arange(shape[1]) // b, lattice.shape[1] - 1)
     return np.asarray(far[np.ix_(rows, columns)])
