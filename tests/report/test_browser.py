@@ -12,6 +12,7 @@ from typing import Any
 
 import pytest
 
+from tfm.batch.sheet import read_sheet
 from tfm.report import build_report
 from tfm.report.drawing import Pictures
 
@@ -99,10 +100,14 @@ def _shown(page: Any) -> list[str]:
     return list(page.eval_on_selector_all("#fields tbody tr:not([hidden])", "rows => rows.map(r => r.dataset.field)"))
 
 
-def _download(page: Any, button: str) -> list[dict[str, str]]:
+def _written(page: Any, button: str) -> str:
     with page.expect_download() as waiting:
         page.click(button)
-    return list(csv.DictReader(io.StringIO(Path(waiting.value.path()).read_text(encoding="utf-8"))))
+    return Path(waiting.value.path()).read_text(encoding="utf-8")
+
+
+def _download(page: Any, button: str) -> list[dict[str, str]]:
+    return list(csv.DictReader(io.StringIO(_written(page, button))))
 
 
 def test_first_screen_answers_what_went_wrong(large: Path, open_page: Callable[..., Any]) -> None:
@@ -177,7 +182,11 @@ def test_decisions_stay_and_leave_as_files(large: Path, open_page: Callable[...,
     sheet = _download(page, "#export-sheet")
     assert [r["field"] for r in sheet] == [name for name in shown if name != "plate-001"]
     assert "outlines.tif" in sheet[0]["outline"]
-    assert list(sheet[0])[4] == "youngs_modulus [kPa]"
+    # What was saved is a sheet that runs again, with units where they were.
+    (tmp_path / "sheet.csv").write_text(_written(page, "#export-sheet"), encoding="utf-8")
+    again = read_sheet(tmp_path / "sheet.csv")
+    assert [row.field for row in again.rows] == [r["field"] for r in sheet]
+    assert {row.youngs_modulus for row in again.rows} == {2000.0}
     # The file finds its way back into another browser.
     other = open_page(large / "report.html")
     (tmp_path / "decisions.csv").write_text('field,decision,note\nplate-003,keep,"a, b"\n', encoding="utf-8")
@@ -234,6 +243,9 @@ def test_contrast_width_and_looks(built: Path, open_page: Callable[..., Any], wi
         ratio, text = page.evaluate(CONTRAST)
         assert ratio >= 4.5, text
         assert page.evaluate("document.documentElement.scrollWidth") <= width
+        if name == "index":
+            names = page.eval_on_selector_all("#fields .name", "all => all.map(e => e.getClientRects().length)")
+            assert max(names) <= 3  # lines that a name is broken into
 
 
 def test_prints_without_controls(built: Path, open_page: Callable[..., Any]) -> None:

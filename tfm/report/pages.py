@@ -40,7 +40,7 @@ _COLUMNS = (
     ("noise", "Noise, nm", True),
     ("gel", "Gel", False),
 )
-_WIDE = ("cells", "axis", "energy", "misfit", "noise", "gel")
+_WIDE = ("condition", "cells", "axis", "energy", "misfit", "noise", "gel")
 _NUMERIC = (
     ("moment", "Contractile moment, pN m"),
     ("error", "Error of the moment, %"),
