@@ -159,7 +159,8 @@ def pairs(count: int, first: int) -> None:
         point.append((pair.dipole_energy - true) / true)
         print(
             f"pair {seed}: W {pair.energy * 1e15:+.4f} ± {pair.energy_sd * 1e15:.4f} fJ, true {true * 1e15:+.4f},"
-            f" z {z[-1]:+.2f}; point dipoles off by {100 * point[-1]:+.0f} % at {pair.extras['lengths_apart']:.1f} lengths",
+            f" z {z[-1]:+.2f}; point dipoles off by {100 * point[-1]:+.0f} %"
+            f" at {pair.extras['lengths_apart']:.1f} lengths",
             flush=True,
         )
     print(f"{covered} of {count} covered; rms error/quoted {np.sqrt(np.mean(np.square(z))):.2f}")

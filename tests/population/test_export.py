@@ -182,3 +182,18 @@ def test_what_cannot_be_exported_is_refused():
         export_document([row(x_um="nan")], [], [], [])
     with pytest.raises(InputError, match="stands under the conditions"):
         summarise_conditions([*cells(2), *[MeasuredCell("soft0", "x", "stiff", np.zeros(3), np.eye(3))]])
+
+
+def test_the_error_of_a_mean_over_frames_covers_what_the_frames_share():
+    # Every frame is compared with the same relaxed frame: half of the variance is common and does not average out.
+    rng = np.random.default_rng(6)
+    own, v, z = np.array([-1.0, 0.0, -0.4]) * 1e-12, 1e-26, []
+    for _ in range(300):
+        shared = np.sqrt(v / 2) * rng.normal(size=3)
+        frames = [
+            MeasuredCell("c", "f", "soft", own + shared + np.sqrt(v / 2) * rng.normal(size=3), v * np.eye(3), 0.0)
+            for _ in range(12)
+        ]
+        merged = combine_repeats(frames)[0]
+        z.append((merged.dipole - own) / np.sqrt(np.diag(merged.covariance)))
+    assert np.sqrt(np.mean(np.square(z))) == pytest.approx(1.0, abs=0.12)

@@ -6,9 +6,10 @@ import warnings
 
 import numpy as np
 import pytest
-from scipy import optimize
+from scipy import optimize, stats
 
 from tfm.errors import InputError
+from tfm.population.response import ResponseData
 from tfm.population.stiffness import coupling_strength, fit_stiffness, saturating_moment
 
 P, HALF = 2e-12, 5e3
@@ -54,6 +55,28 @@ def test_errors_in_both_agree_with_orthogonal_distance_regression():
     assert fit.e_star / 1e3 == pytest.approx(out.beta[1], abs=0.5 * out.sd_beta[1])
     width = (fit.e_star_high - fit.e_star_low) / 1e3 / (2 * 2.07)  # t(21), 97.5 %
     assert width == pytest.approx(out.sd_beta[1] / np.sqrt(out.res_var), rel=0.5)
+
+
+def test_the_likelihood_is_that_of_moments_computed_with_a_wrong_modulus():
+    # The generative story, differentiated numerically, in scipy's dense normal density.
+    e = np.array([2e3, 2e3, 8e3, 8e3, 8e3])
+    gel = np.array([0, 0, 1, 1, 1])
+    v = np.full(5, 0.01)
+    y = np.array([0.5, 0.7, 1.2, 1.0, 1.3])
+    level, half, tau, sigma = 0.9, 6e3, 0.15, 0.1
+    data = ResponseData(e, y, v, gel, np.full(5, sigma), True, 4e3)
+    plateau = level * (4e3 + half) / 4e3
+
+    def typed_in(delta):
+        true = e * (1 + delta[gel])
+        return plateau * true / (true + half) / (1 + delta[gel])
+
+    mean = typed_in(np.zeros(2))
+    step = 1e-5
+    h = np.stack([(typed_in(step * unit) - typed_in(-step * unit)) / (2 * step) for unit in np.eye(2)], axis=1)
+    covariance = np.diag(v + (tau * mean) ** 2) + sigma**2 * h @ h.T
+    dense = stats.multivariate_normal(mean, covariance).logpdf(y)
+    assert -data.loss(level, half, tau) - 2.5 * np.log(2 * np.pi) == pytest.approx(dense, rel=1e-7)
 
 
 def test_intervals_cover():

@@ -19,6 +19,7 @@ from tfm.synth import (
     displacement_at,
     expected_photons,
     lattice_axis,
+    lattice_work,
     make_bead_images,
     make_beads,
     make_cell_traction,
@@ -126,6 +127,18 @@ def test_energy_of_a_pair_is_the_same_from_either_side_and_belongs_to_the_whole(
     # Stored energy of both = alone + alone + W (superposition).
     assert both.strain_energies.sum() == pytest.approx(sum(alone) + both.pair_energies[1, 2], rel=1e-9)
     assert all(energy > 0 for energy in both.strain_energies)
+
+
+def test_the_work_of_a_bilinear_traction_is_its_exact_integral():
+    # One node of 3 Pa: a pyramid over four squares of edge d. Integrals of x^2 and y^2 times the pyramid by hand:
+    # d^2 (x_i^2 + d^2 / 6), because a triangle of half-width d has variance d^2 / 6.
+    d = 0.5
+    traction, u = np.zeros((2, 9, 9)), np.zeros((2, 9, 9))
+    traction[0, 4, 5] = traction[1, 4, 5] = 3.0
+    y, x = np.mgrid[:9, :9] * d
+    u[0], u[1] = x**2, y**2
+    by_hand = 3.0 * d**2 * (2.5**2 + d**2 / 6) + 3.0 * d**2 * (2.0**2 + d**2 / 6)
+    assert lattice_work(traction, u, d) == pytest.approx(by_hand, rel=1e-12)
 
 
 def test_strain_energy_does_not_depend_on_the_lattice():
