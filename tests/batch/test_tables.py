@@ -43,11 +43,10 @@ def test_columns_are_the_agreed_ones_and_each_is_explained(name: str, columns: t
     assert names == AGREED[name].split()
     said = json.loads(columns_json(["donor"]))[f"{name}.csv"]
     assert list(said) == [*names, "donor"]
+    units = {"s", "um", "um2", "deg", "pNm", "pNm2", "nN", "fJ", "Pa", "pN", "fNm", "px"}
     for column in names:
         assert len(said[column]["meaning"]) > 10
-        has_suffix = (
-            column.rsplit("_", 1)[-1] in {*["s", "um", "um2", "deg", "pNm", "pNm2", "nN", "fJ", "Pa", "pN", "fNm", "px"]} and "_" in column
-        )
+        has_suffix = "_" in column and column.rsplit("_", 1)[-1] in units
         assert bool(said[column]["unit"]) is has_suffix, column
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import re
 import unicodedata
+from functools import lru_cache
 from typing import Any
 
 from tfm.batch.sheet_columns import Column
@@ -40,6 +41,7 @@ def _spaces(text: str) -> str:
     return "".join(" " if unicodedata.category(c) == "Zs" else c for c in text).strip()
 
 
+@lru_cache(maxsize=4096)  # a column mostly repeats the same few quantities
 def _quantity(text: str, column: Column, header_unit: str) -> float | str:
     example = DIMENSIONS[column.dimension][1]
     plain = _spaces(text).replace("\u2212", "-")
