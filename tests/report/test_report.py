@@ -127,7 +127,7 @@ def test_a_cell_without_outline_is_listed_although_its_field_is_ok(
 
 
 def test_several_processes_draw_the_same(make_folder: Callable[..., Path], tmp_path: Path) -> None:
-    one, two = (make_folder(tmp_path / name / "results", fields=4, bad=1) for name in ("one", "two"))
+    one, two = (make_folder(tmp_path / name / "results", fields=8, arrays=False) for name in ("one", "two"))
     build_report(one)
     build_report(two, workers=2)
     for path in sorted(one.glob("figures/**/*.*")):

@@ -19,13 +19,14 @@ from tfm.report.figures import maps_figure, rows_of_frame
 from tfm.report.files import svg_text, thumbnail, write_bytes
 from tfm.report.numbers import numbers_figure
 from tfm.report.results import FieldResult, number
+from tfm.report.series import series_figure
 from tfm.report.style import drawing
 from tfm.report.words import alt_maps, cell_sentence, plain
 
 __all__ = ["DRAWING_VERSION", "Picture", "Pictures", "draw_field", "strongest_frame"]
 
 #: Raise when figures change, so that pictures of earlier versions are drawn anew.
-DRAWING_VERSION = 3
+DRAWING_VERSION = 4
 
 
 @dataclass(frozen=True)
@@ -75,7 +76,7 @@ def _state(field: FieldResult, digest: str) -> str:
         rows,
         dict(field.gel or {}),
         field.record.get("budget"),
-        field.record.get("poisson_evidence"),
+        field.record.get("gel_evidence"),
         field.change_only,
     ]
     return hashlib.sha256(json.dumps(about, sort_keys=True, default=str).encode()).hexdigest()
@@ -88,6 +89,11 @@ _CAPTIONS = {
         "left corner; dots are vectors below twice their noise. In the right map purple pulls towards the cell's "
         "centroid and orange pushes away. Bars with arrow heads are the principal axes: heads point inwards along an "
         "axis that contracts, and the shaded tips are 95 % regions of angle and size.",
+    ),
+    "frames": (
+        "The series at a glance",
+        "Traction in evenly spaced frames, all to one colour scale and one scale of the principal axes. The number is "
+        "the contractile moment of all cells of the frame together.",
     ),
     "beads": (
         "Relaxed and stressed beads on top of each other",
@@ -130,6 +136,12 @@ def _alt(name: str, field: FieldResult, frame: int) -> str:
     row = next(iter(rows_of_frame(field.frames, frame)), {})
     if name == "maps":
         return alt_maps(field, rows_of_frame(field.cells, frame))
+    if name == "frames":
+        totals = [
+            f"frame {r.get('frame')}, cell {r.get('cell')}: {plain(number(r, 'contractile_moment_pNm'))} pN m"
+            for r in field.cells
+        ]
+        return "Traction in evenly spaced frames of the series. " + "; ".join(totals[:24])
     if name == "beads":
         drift = f"{plain(number(row, 'drift_x_px'))} px in x and {plain(number(row, 'drift_y_px'))} px in y"
         return f"Relaxed over stressed beads, before and after a drift of {drift}, and where the gel moved most."
@@ -141,6 +153,7 @@ def _alt(name: str, field: FieldResult, frame: int) -> str:
 
 _FIGURES: dict[str, Callable[[FieldResult, FieldArrays], Figure | None]] = {
     "maps": maps_figure,
+    "frames": series_figure,
     "beads": beads_figure,
     "residual": residual_figure,
     "numbers": numbers_figure,

@@ -31,6 +31,8 @@ class FieldArrays:
     xi, yi, relaxed, stressed, residual
         Positions m of the pictures' pixels, pictures of the bead images, and what is left of their difference in
         standard deviations of the relaxed one, ``[row, column]``.
+    path
+        The file, for the other frames.
     """
 
     frame: int
@@ -49,6 +51,7 @@ class FieldArrays:
     relaxed: Array | None = None
     stressed: Array | None = None
     residual: Array | None = None
+    path: Path | None = None
 
     @property
     def camera_pixel(self) -> float | None:
@@ -103,4 +106,5 @@ def read_arrays(path: Path, *, frame: int = 0) -> FieldArrays:
             relaxed=_take(file, "relaxed_image", frame, 2),
             stressed=_take(file, "stressed_image", frame, 2),
             residual=_take(file, "residual_image", frame, 2),
+            path=path,
         )

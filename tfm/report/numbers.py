@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -14,7 +15,7 @@ from tfm.report.fielddata import FieldArrays
 from tfm.report.figures import rows_of_frame
 from tfm.report.results import FieldResult, Row, number
 from tfm.report.style import INK, LINE, QUIET, new_figure
-from tfm.report.words import with_error
+from tfm.report.words import plain, with_error
 
 __all__ = [
     "BUDGET_WORDS",
@@ -97,34 +98,63 @@ def draw_budget(ax: Axes, shares: Mapping[str, Mapping[str, float]]) -> None:
     ax.set_title("Error budget of the contractile moment")
 
 
-def draw_evidence(ax: Axes, gel: Row, curve: Mapping[str, Sequence[float]] | None = None) -> None:
-    """Poisson ratio that the beads point to (95 % interval), the entered value, and the evidence curve."""
-    entered, best = number(gel, "poisson"), number(gel, "poisson_best")
-    low, high = number(gel, "poisson_low"), number(gel, "poisson_high")
+#: Quantity -> (words, unit of the axis, columns of gel.csv: entered, best, low, high; narrowest limits of the axis).
+_EVIDENCE: dict[str, tuple[str, str, tuple[str, str, str, str], tuple[float, float] | None]] = {
+    "poisson": ("Poisson ratio", "", ("poisson", "poisson_best", "poisson_low", "poisson_high"), (0.19, 0.505)),
+    "thickness": (
+        "gel thickness",
+        "µm",
+        ("thickness_um", "thickness_best_um", "thickness_low_um", "thickness_high_um"),
+        None,
+    ),
+}
+
+
+def draw_evidence(
+    ax: Axes, gel: Row, quantity: str = "poisson", curve: tuple[Sequence[float], Sequence[float]] | None = None
+) -> None:
+    """What the beads say about the Poisson ratio or the thickness: best value, 95 % interval, and what was entered.
+
+    ``curve`` is the log-evidence (values, natural logarithms) where it was kept.
+    """
+    words, unit, columns, limits = _EVIDENCE[quantity]
+    entered, best, low, high = (number(gel, c) for c in columns)
     if curve is not None:
-        ax.plot(curve["poisson"], curve["log_evidence"], color=LINE, marker="o", ms=3, lw=1.3)
+        height = np.asarray(curve[1], float) - np.max(curve[1])
+        ax.plot(curve[0], height, color=LINE, marker="o", ms=3, lw=1.3)
+        ax.set_ylim(max(float(height.min()), -30.0) * 1.1, 2.0)
         ax.set_ylabel("log-evidence − best")
     else:
         ax.set_yticks([])
         ax.set_ylim(-1, 1)
-    if best is not None and low is not None and high is not None:
-        ax.axvspan(low, high, color=LINE, alpha=0.16, lw=0)
-        ax.axvline(best, color=LINE, lw=1.6)
-        ax.text(
-            0.03,
-            0.06,
-            f"beads: {best:.2f} (95 %: {low:.2f} to {high:.2f})",
-            transform=ax.transAxes,
-            fontsize=8,
-            color=LINE,
-        )
+    said = []
     if entered is not None:
         ax.axvline(entered, color=INK, lw=1.6, ls="--")
-        ax.text(0.03, 0.17, f"entered: {entered:g} (dashed)", transform=ax.transAxes, fontsize=8)
+        said.append(f"entered: {plain(entered)} {unit} (dashed)")
+    if best is not None:
+        ax.axvline(best, color=LINE, lw=1.6)
+        text = f"beads: {plain(best)} {unit}"
+        if low is not None and high is not None:
+            ax.axvspan(low, high, color=LINE, alpha=0.16, lw=0)
+            text += f" (95 %: {plain(low)} to {plain(high)})"
+        said.append(text)
     known = [v for v in (entered, best, low, high) if v is not None]
-    ax.set_xlim(min([0.2, *known]) - 0.01, 0.505)
-    ax.set_xlabel("Poisson ratio")
-    ax.set_title("Evidence for the Poisson ratio: " + (gel.get("verdict") or "none"))
+    if limits is None:
+        span = max(known) - min(known) or max(known)
+        limits = (max(min(known) - 0.5 * span, 0.0), max(known) + 0.5 * span)
+    ax.set_xlim(min([limits[0], *known]), max([limits[1], *known]))
+    ax.set_xlabel(f"{words}, {unit}" if unit else words)
+    ax.set_title(f"Evidence for the {words}")
+    box = {"facecolor": "#ffffff", "alpha": 0.8, "edgecolor": "none", "pad": 1.0}
+    ax.text(0.03, 0.05, "\n".join(said), transform=ax.transAxes, fontsize=8, va="bottom", bbox=box)
+
+
+def _curve(record: Mapping[str, Any], quantity: str) -> tuple[Sequence[float], Sequence[float]] | None:
+    """The kept evidence, ``{"poisson": {"value": [...], "log_evidence": [...]}, ...}`` in the tables' units."""
+    kept = (record.get("gel_evidence") or {}).get(quantity)
+    if not isinstance(kept, Mapping) or not kept.get("value") or len(kept["value"]) != len(kept["log_evidence"]):
+        return None
+    return kept["value"], kept["log_evidence"]
 
 
 def draw_traces(ax: Axes, field: FieldResult) -> None:
@@ -207,15 +237,16 @@ def numbers_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
     frame = a.frame
     jobs: list[Callable[[Axes], None]] = []
     shares = budget_shares(field.record, frame)
-    gel, curve = field.gel, field.record.get("poisson_evidence")
+    gel = field.gel
     if len({r.get("frame") for r in field.cells}) > 1:
         jobs.append(lambda ax: draw_traces(ax, field))
     if rows_of_frame(field.pairs, frame):
         jobs.append(lambda ax: draw_links(ax, field, frame))
     if shares:
         jobs.append(lambda ax: draw_budget(ax, shares))
-    if gel is not None and number(gel, "poisson_best") is not None:
-        jobs.append(lambda ax: draw_evidence(ax, gel, curve if isinstance(curve, Mapping) else None))
+    for quantity, (_, _, columns, _) in _EVIDENCE.items():
+        if gel is not None and number(gel, columns[1]) is not None:
+            jobs.append(partial(draw_evidence, gel=gel, quantity=quantity, curve=_curve(field.record, quantity)))
     if not jobs:
         return None
     wide, high = 3.9, 3.2
