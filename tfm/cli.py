@@ -4,10 +4,11 @@ Every command is a thin function: it reads its options, imports the room that do
 Every command is a thin function: it reads its options, imports the room that does the work (heavy imports stay inside;
 
     @app.command()
-    def stiffness(folders: Annotated[list[Path], ...], debug: Debug = False) -> int:
+    def weigh(folder: Annotated[Path, typer.Argument(help="Results folder.")], debug: Debug = False) -> int:
         \"\"\"One sentence that --help shows.\"\"\"
-        from tfm.population.commands import write_stiffness
-        ...
+        from tfm.somewhere import write_weights  # heavy imports here
+
+        say(write_weights(folder))
         return 0
 
 Results go to files or stdout, messages to stderr. Exit codes: 0 all usable; 1 some fields failed, the rest is written;
@@ -24,6 +25,8 @@ from typing import Annotated, Any
 
 import typer
 
+from tfm.cli_options import Debug, choice, debugging, one_thread_each, option_quantity, say
+from tfm.cli_population import register
 from tfm.errors import InputError, TfmError
 
 __all__ = ["app", "main"]
@@ -39,18 +42,6 @@ app = typer.Typer(
 
 #: Base of what the option parser raises; its home moved between versions of the library, this class did not.
 _UsageError: type[Any] = typer.BadParameter.__mro__[2]
-_debugging = False
-
-
-def _set_debug(value: bool) -> bool:
-    global _debugging
-    _debugging = _debugging or value
-    return value
-
-
-Debug = Annotated[
-    bool, typer.Option("--debug", help="Add the traceback to an error.", callback=_set_debug, is_eager=True)
-]
 
 
 def _show_version(value: bool) -> None:
@@ -71,17 +62,6 @@ def _options(
     """Force-dipole tensors of cells, with error bars, from bead images of soft gels."""
 
 
-def _say(text: str) -> None:
-    sys.stderr.write(text + "\n")
-    sys.stderr.flush()
-
-
-def _choice(value: str, allowed: tuple[str, ...], option: str) -> str:
-    if value not in allowed:
-        raise InputError(f"{option} '{value}' is not known", code="bad-option", remedy=f"choose {', '.join(allowed)}")
-    return value
-
-
 def _shard(text: str | None) -> tuple[int, int] | None:
     if text is None:
         return None
@@ -92,22 +72,12 @@ def _shard(text: str | None) -> tuple[int, int] | None:
 
 
 def _seconds(text: str) -> float | None:
-    from tfm.units import parse_quantity
-
     if text.lower() == "none":
         return None
-    value = _option_quantity(text, "time", "--timeout", parse_quantity)
+    value = option_quantity(text, "time", "--timeout")
     if value <= 0:
         raise InputError(f"--timeout '{text}' is not above 0", code="bad-option", remedy="write for instance '30 min'")
     return value
-
-
-def _option_quantity(text: str, dimension: str, option: str, parse: Any) -> float:
-    try:
-        return float(parse(text, dimension))
-    except TfmError as error:
-        error.message = f"{option}: {error.message}"
-        raise
 
 
 def _cores() -> int:
@@ -148,9 +118,7 @@ def run(
     debug: Debug = False,
 ) -> int:
     """Measure every field of a cell sheet: dipoles, error bars, pair energies, tables and a report."""
-    _say(f"reading {sheet}")
-    from tfm.batch.workers import one_thread_each
-
+    say(f"reading {sheet}")
     one_thread_each()
     from tfm.batch.progress import Progress, summary_lines
     from tfm.batch.run import RunOptions, run_sheet
@@ -158,8 +126,8 @@ def run(
 
     settings = RunSettings.model_validate(
         {
-            "method": _choice(method, METHODS, "--method"),
-            "lambda_choice": _choice(lambda_choice, ("gcv", "l-curve", "discrepancy", "evidence"), "--lambda"),
+            "method": choice(method, METHODS, "--method"),
+            "lambda_choice": choice(lambda_choice, ("gcv", "l-curve", "discrepancy", "evidence"), "--lambda"),
             "gel_check": gel_check,
         }
     )
@@ -170,21 +138,26 @@ def run(
 
     def start(total: int, _: Any, problems: Any) -> None:
         for problem in problems:
-            _say(str(problem))
+            say(str(problem))
         progress.start(total)
 
     try:
         summary = run_sheet(sheet, output, settings=settings, options=options, on_start=start, on_field=progress.field)
     finally:
         progress.stop()
+    finished = not summary.stopped and all(e.finished for e in summary.entries)
+    if finished and any(len(e.rows["fields"]) > 1 for e in summary.entries):
+        from tfm.population.beat_table import write_beats
+
+        write_beats(output, output / "beats.csv")
     page = None
-    if report and not summary.stopped and all(e.finished for e in summary.entries):
+    if report and finished:
         from tfm.report import build_report
 
         page = build_report(output)
     command = "tfm " + " ".join(_quoted(a) for a in sys.argv[1:] if a != "--redo")
     for line in summary_lines(summary, output, report=page, command=command):
-        _say(line)
+        say(line)
     return summary.exit_code
 
 
@@ -209,21 +182,21 @@ def check(
     try:
         found, problems = check_sheet(sheet, root=root)
     except SheetError as error:
-        if _debugging:
+        if debugging():
             traceback.print_exc()
         for problem in error.problems:
             sys.stdout.write(f"{problem}\n")
-        _say(f"{sheet}: {len(error.problems)} problems; nothing can be computed (exit 2)")
+        say(f"{sheet}: {len(error.problems)} problems; nothing can be computed (exit 2)")
         return 2
     for problem in problems:
         sys.stdout.write(f"{problem}\n")
     bad = len({problem.row for problem in problems})
     good = len(found.rows) - bad
     if not problems:
-        _say(f"{sheet}: {good} rows, no problems (exit 0)")
+        say(f"{sheet}: {good} rows, no problems (exit 0)")
         return 0
     code = 1 if good else 2
-    _say(f"{sheet}: {len(problems)} problems in {bad} of {len(found.rows)} rows; {good} can be computed (exit {code})")
+    say(f"{sheet}: {len(problems)} problems in {bad} of {len(found.rows)} rows; {good} can be computed (exit {code})")
     return code
 
 
@@ -242,16 +215,15 @@ def pairs(
     """Interaction energy, force and torque of every pair of cells, from the dipole tensors alone."""
     from tfm.batch.pair_table import write_pair_table
     from tfm.gel import Gel
-    from tfm.units import parse_quantity
 
     gel = Gel(
-        _option_quantity(youngs_modulus, "stress", "--youngs-modulus", parse_quantity),
-        _option_quantity(poisson, "dimensionless", "--poisson", parse_quantity),
-        None if thickness is None else _option_quantity(thickness, "length", "--thickness", parse_quantity),
+        option_quantity(youngs_modulus, "stress", "--youngs-modulus"),
+        option_quantity(poisson, "dimensionless", "--poisson"),
+        None if thickness is None else option_quantity(thickness, "length", "--thickness"),
     )
-    noise = None if noise_energy is None else _option_quantity(noise_energy, "energy", "--noise-energy", parse_quantity)
+    noise = None if noise_energy is None else option_quantity(noise_energy, "energy", "--noise-energy")
     count, failed = write_pair_table(cells, gel, output, noise_energy=noise)
-    _say(f"{count} pairs" + (f", {failed} failed" if failed else "") + f" (exit {1 if failed else 0})")
+    say(f"{count} pairs" + (f", {failed} failed" if failed else "") + f" (exit {1 if failed else 0})")
     return 1 if failed else 0
 
 
@@ -261,148 +233,14 @@ def demo(
     debug: Debug = False,
 ) -> int:
     """Write an invented study to try things out: images, outlines, a cell sheet, and the forces that were put in."""
-    _say(f"writing the demo study to {folder}")
-    from tfm.batch.workers import one_thread_each
-
+    say(f"writing the demo study to {folder}")
     one_thread_each()
     from tfm.batch.atomic import storage_guard
     from tfm.synth.demo import write_demo
 
     with storage_guard(folder):
         sheet = write_demo(folder)
-    _say(f"next: tfm run {_quoted(str(sheet))} -o {_quoted(str(folder / 'results'))}")
-    return 0
-
-
-@app.command()
-def stiffness(
-    folders: Annotated[list[Path], typer.Argument(help="Results folders of runs on gels of different stiffness.")],
-    output: Annotated[Path, typer.Option("--output", "-o", help="Folder for tables and figure.")],
-    debug: Debug = False,
-) -> int:
-    """How the contractile moment depends on stiffness: response, best stiffness for coupling, intervals."""
-    from tfm.population.commands import write_stiffness
-
-    for line in write_stiffness(folders, output):
-        _say(line)
-    return 0
-
-
-@app.command()
-def export(
-    folder: Annotated[Path, typer.Argument(help="Results folder of a run.")],
-    output: Annotated[Path, typer.Option("--output", "-o", help="JSON file to write.")],
-    frame: Annotated[str, typer.Option(help="y-down, as in the image, or y-up.")] = "y-down",
-    draws: Annotated[int, typer.Option(min=0, help="Made-up cells per condition, measurement error removed.")] = 0,
-    seed: Annotated[int, typer.Option(help="Of the draws.")] = 0,
-    debug: Debug = False,
-) -> int:
-    """Dipoles, pairs and populations as one JSON document for a mechanical model."""
-    from tfm.population.commands import write_export
-
-    for line in write_export(folder, output, frame=frame, draws=draws, seed=seed):
-        _say(line)
-    return 0
-
-
-@app.command(name="map")
-def map_command(
-    cells: Annotated[Path, typer.Argument(help="Table with field, cell and the dipoles; cells.csv will do.")],
-    field: Annotated[str, typer.Option(help="Field of the measured cell.")],
-    cell: Annotated[str, typer.Option(help="Number of the measured cell.")],
-    youngs_modulus: Annotated[str, typer.Option(help="Young's modulus with its unit, for instance '5 kPa'.")],
-    poisson: Annotated[str, typer.Option(help="Poisson ratio, 0 to 0.5.")],
-    output: Annotated[Path, typer.Option("--output", "-o", help="Folder for netCDF and picture.")],
-    thickness: Annotated[str | None, typer.Option(help="Thickness of the gel, for instance '30 um'.")] = None,
-    frame: Annotated[str, typer.Option(help="Frame of a series.")] = "0",
-    reach: Annotated[str, typer.Option(help="Half-width of the map.")] = "100 um",
-    debug: Debug = False,
-) -> int:
-    """Energy of a second cell against its position and angle around a measured one."""
-    from tfm.gel import Gel
-    from tfm.population.commands import write_map
-    from tfm.units import parse_quantity
-
-    gel = Gel(
-        _option_quantity(youngs_modulus, "stress", "--youngs-modulus", parse_quantity),
-        _option_quantity(poisson, "dimensionless", "--poisson", parse_quantity),
-        None if thickness is None else _option_quantity(thickness, "length", "--thickness", parse_quantity),
-    )
-    width = _option_quantity(reach, "length", "--reach", parse_quantity)
-    for line in write_map(cells, field, cell, gel, output, frame=frame, reach=width):
-        _say(line)
-    return 0
-
-
-@app.command()
-def plan(
-    youngs_modulus: Annotated[str, typer.Option(help="Young's modulus with its unit, for instance '5 kPa'.")],
-    poisson: Annotated[str, typer.Option(help="Poisson ratio, 0 to 0.5.")],
-    pixel: Annotated[str, typer.Option(help="Pixel size, for instance '0.2 um'.")],
-    moment: Annotated[str, typer.Option(help="Contractile moment to expect, for instance '0.5 pN m'.")],
-    output: Annotated[Path, typer.Option("--output", "-o", help="Folder for table and figure.")],
-    thickness: Annotated[str | None, typer.Option(help="Thickness of the gel, for instance '30 um'.")] = None,
-    field_px: Annotated[int, typer.Option(min=64, help="Edge of the field in pixels.")] = 640,
-    bead_density: Annotated[float, typer.Option(help="Beads per square pixel.")] = 0.02,
-    photons: Annotated[float, typer.Option(help="Detected photons per bead and frame.")] = 500.0,
-    bead_sigma: Annotated[str, typer.Option(help="Standard deviation of a bead's image.")] = "0.25 um",
-    background: Annotated[float, typer.Option(help="Photons per pixel that come from no bead.")] = 10.0,
-    read_noise: Annotated[float, typer.Option(help="Photons per pixel, one standard deviation.")] = 1.5,
-    cell_length: Annotated[str, typer.Option(help="Length of the cell.")] = "40 um",
-    cell_width: Annotated[str, typer.Option(help="Width of the cell.")] = "16 um",
-    distance: Annotated[str | None, typer.Option(help="Between two such cells, for the pair energy.")] = None,
-    debug: Debug = False,
-) -> int:
-    """Before the experiment: the error bar to expect, the smallest dipole that shows, and what would help most."""
-    from tfm.gel import Gel
-    from tfm.population.commands import write_plan
-    from tfm.population.plan import Setup
-    from tfm.units import parse_quantity
-
-    def length(text: str, option: str) -> float:
-        return _option_quantity(text, "length", option, parse_quantity)
-
-    gel = Gel(
-        _option_quantity(youngs_modulus, "stress", "--youngs-modulus", parse_quantity),
-        _option_quantity(poisson, "dimensionless", "--poisson", parse_quantity),
-        None if thickness is None else length(thickness, "--thickness"),
-    )
-    size = length(pixel, "--pixel")
-    if not size > 0:
-        raise InputError(f"--pixel '{pixel}' is not above 0", code="bad-option", remedy="write for instance '0.2 um'")
-    setup = Setup(
-        gel=gel,
-        pixel_size=size,
-        field_px=field_px,
-        beads_per_area=bead_density / size**2,
-        photons=photons,
-        bead_sigma=length(bead_sigma, "--bead-sigma"),
-        background=background,
-        read_noise=read_noise,
-        cell_length=length(cell_length, "--cell-length"),
-        cell_width=length(cell_width, "--cell-width"),
-        contractile_moment=_option_quantity(moment, "energy", "--moment", parse_quantity),
-        distance=None if distance is None else length(distance, "--distance"),
-    )
-    _say("inventing cells of that size and measuring them; this takes about a minute")
-    for line in write_plan(setup, output, cells=2):
-        _say(line)
-    return 0
-
-
-@app.command()
-def beats(
-    folder: Annotated[Path, typer.Argument(help="Results folder of a run with time series.")],
-    output: Annotated[
-        Path | None, typer.Option("--output", "-o", help="Table to write; default: beats.csv in the folder.")
-    ] = None,
-    debug: Debug = False,
-) -> int:
-    """Beating cells: period, amplitude, rates of rise and relaxation; lag and coherence of two cells."""
-    from tfm.population.beat_table import write_beats
-
-    for line in write_beats(folder, output or folder / "beats.csv"):
-        _say(line)
+    say(f"next: tfm run {_quoted(str(sheet))} -o {_quoted(str(folder / 'results'))}")
     return 0
 
 
@@ -413,12 +251,15 @@ def report_command(
     debug: Debug = False,
 ) -> int:
     """Build the report of a results folder again, from nothing but that folder."""
-    _say(f"reading {folder}")
+    say(f"reading {folder}")
     from tfm.report import build_report
 
     page = build_report(folder, redo=redo)
-    _say(f"report: {page} (exit 0)")
+    say(f"report: {page} (exit 0)")
     return 0
+
+
+register(app)
 
 
 def main() -> None:
@@ -426,13 +267,13 @@ def main() -> None:
     try:
         code = app(standalone_mode=False)
     except _UsageError as error:
-        _say(f"tfm: {error.format_message()}; see tfm --help [bad-option]")
+        say(f"tfm: {error.format_message()}; see tfm --help [bad-option]")
         code = 2
     except typer.Abort:
-        _say("tfm: interrupted (exit 130)")
+        say("tfm: interrupted (exit 130)")
         code = 130
     except KeyboardInterrupt:
-        _say("tfm: interrupted (exit 130)")
+        say("tfm: interrupted (exit 130)")
         code = 130
     except BrokenPipeError:
         # Whoever read our output (head, less) has seen enough.
@@ -441,10 +282,10 @@ def main() -> None:
     except TfmError as error:
         code = _refuse(error)
     except Exception as error:  # nothing else may leave without being called what it is
-        if _debugging:
+        if debugging():
             traceback.print_exc()
         where = traceback.extract_tb(error.__traceback__)[-1]
-        _say(
+        say(
             f"tfm: a fault of ours: {type(error).__name__}: {' '.join(str(error).split())[:200]} "
             f"({Path(where.filename).name}:{where.lineno}); repeat with --debug and send us the traceback (exit 101)"
         )
@@ -453,12 +294,12 @@ def main() -> None:
 
 
 def _refuse(error: TfmError) -> int:
-    if _debugging:
+    if debugging():
         traceback.print_exc()
     for problem in getattr(error, "problems", (error,)):
-        _say(f"tfm: {problem}")
+        say(f"tfm: {problem}")
     if error.code in ("storage", "disk-full"):
-        _say("tfm: stopped; what was written before is whole (exit 1)")
+        say("tfm: stopped; what was written before is whole (exit 1)")
         return 1
-    _say("tfm: nothing was computed (exit 2)")
+    say("tfm: nothing was computed (exit 2)")
     return 2

@@ -19,6 +19,7 @@ import pytest
 import tfm.batch.field as real
 import tfm.batch.run
 import tfm.cli
+import tfm.cli_options
 
 ROOT = Path(__file__).parents[2]
 STANDIN = ROOT / "tests" / "batch"
@@ -47,7 +48,7 @@ def _tfm(*arguments: str | Path) -> subprocess.CompletedProcess[str]:
     out, err = io.StringIO(), io.StringIO()
     with pytest.MonkeyPatch.context() as patch, redirect_stdout(out), redirect_stderr(err):
         patch.setattr(sys, "argv", ["tfm", *map(str, arguments)])
-        patch.setattr(tfm.cli, "_debugging", False)
+        patch.setitem(tfm.cli_options._state, "debug", False)
         patch.setenv("COLUMNS", "200")
         with pytest.raises(SystemExit) as left:
             tfm.cli.main()
@@ -77,7 +78,9 @@ def test_help_loads_nothing_heavy() -> None:
     assert not loaded & {"numpy", "scipy", "pydantic", "pint", "xarray", "matplotlib", "tifffile", "skimage", "h5py"}
 
 
-@pytest.mark.parametrize("command", ["run", "check", "pairs", "demo", "report"])
+@pytest.mark.parametrize(
+    "command", ["run", "check", "pairs", "demo", "report", "conditions", "stiffness", "export", "map", "beats", "plan"]
+)
 def test_every_command_has_help_with_every_option_explained(command: str) -> None:
     done = _tfm(command, "--help")
     assert done.returncode == 0

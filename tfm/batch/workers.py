@@ -24,29 +24,12 @@ from tfm.batch.store import Store
 from tfm.batch.task import Outcome, Task, execute
 from tfm.errors import InputError
 
-__all__ = ["one_thread_each", "run_tasks"]
+__all__ = ["run_tasks"]
 
-#: Libraries that start threads of their own read these when they are loaded.
-_THREADS = (
-    "OMP_NUM_THREADS",
-    "OPENBLAS_NUM_THREADS",
-    "MKL_NUM_THREADS",
-    "NUMEXPR_NUM_THREADS",
-    "VECLIB_MAXIMUM_THREADS",
-)
 _TICK = 0.25
 #: The parent waits this much longer than the worker's own limit before it kills the worker.
 _GRACE = 30.0
 _PRELOAD = ["tfm.batch.field", "tfm.batch.task"]
-
-
-def one_thread_each() -> None:
-    """Ask numeric libraries for one thread per process; to be called before they are loaded.
-
-    Fields are independent, so workers scale better than threads, and results do not depend on the number of either.
-    """
-    for name in _THREADS:
-        os.environ[name] = "1"
 
 
 def run_tasks(
