@@ -1,9 +1,9 @@
 r"""The beads' data reduced to what a change of gel needs, so that a hundred gels cost less than one inversion.
 
-Displacement is :math:`d = K(\nu, h)\,c`, and at fixed thickness the kernel times :math:`E/(1+\nu)` is exactly linear in
-:math:`\nu` on a half-space (:math:`(1-\nu)\delta_{ij} + \nu r_i r_j/r^2`, Landau & Lifshitz, Theory of Elasticity, sec. 8)
-and a smooth function of it on a layer. Interpolating the *response* at a few Poisson ratios therefore makes the normal
-equations a polynomial in :math:`\nu`, with coefficients that are products of matrices known once and for all.
+Displacement is :math:`d = K(\nu, h)\,c`, and at fixed thickness the kernel times :math:`E/(1+\nu)` is exactly linear
+in :math:`\nu` on a half-space (:math:`(1-\nu)\delta_{ij} + \nu r_i r_j/r^2`, Landau & Lifshitz, Theory of Elasticity,
+sec. 8) and a smooth function of it on a layer. Interpolating the *response* at a few Poisson ratios therefore makes the
+normal equations a polynomial in :math:`\nu`, with coefficients that are products of matrices known once and for all.
 """
 
 from __future__ import annotations
@@ -70,8 +70,6 @@ class ReducedProblem:
         One entry per shape.
     energy
         Weighted sum of squares of the data less the motions.
-    count
-        Number of data less the motions.
     """
 
     data: LinearData
@@ -81,7 +79,6 @@ class ReducedProblem:
     flat: Array
     priors: tuple[_Prior, ...]
     energy: float
-    count: int
 
 
 @dataclass(frozen=True)
@@ -200,7 +197,7 @@ def _softness(problem: ReducedProblem, information: Array) -> float:
     sign, value = np.linalg.slogdet(flat.T @ information @ flat)
     if sign <= 0:
         raise _undetermined()
-    return float(value) / (2.0 * flat.shape[1])
+    return float(value / (2.0 * flat.shape[1]))
 
 
 def _flat_directions(data: LinearData, balance: Array) -> Array:
@@ -273,9 +270,8 @@ def reduce_problem(traction: TractionField, *, most: int = MOST_COEFFICIENTS) ->
     energy = float(value @ _weigh(data.precision, value[:, None])[:, 0])
     energy -= float(free @ linalg.solve(motions.T @ weighted, free, assume_a="sym"))
     balance = balance_rows(data.basis, data.lattice, data.groups)
-    return ReducedProblem(
-        data, motions, weighted, balance, _flat_directions(data, balance), priors, energy, 2 * data.rows.size - motions.shape[1]
-    )  # fmt: skip
+    flat = _flat_directions(data, balance)
+    return ReducedProblem(data, motions, weighted, balance, flat, priors, energy)
 
 
 def _merged(traction: TractionField) -> LinearData:
@@ -304,8 +300,8 @@ def _merged(traction: TractionField) -> LinearData:
     _, member = np.unique(tile, axis=1, return_inverse=True)
     member = np.asarray(member).reshape(-1)
     weight = np.maximum(xx + yy, 0.0) + 1e-12 * float(np.max(xx + yy))
-    total = [np.bincount(member, weights=w) for w in (xx, xy, yy, *score, weight, weight * data.rows, weight * data.columns)]
-    pxx, pxy, pyy, sx, sy, w, r, c = total
+    summed = (xx, xy, yy, *score, weight, weight * data.rows, weight * data.columns)
+    pxx, pxy, pyy, sx, sy, w, r, c = (np.bincount(member, weights=v).astype(np.float64) for v in summed)
     # Half lattice cells: the kernel is interpolated for few distinct fractions.
     rows, columns = np.rint(2.0 * r / w) / 2.0, np.rint(2.0 * c / w) / 2.0
     det, trace = pxx * pyy - pxy**2, pxx + pyy
@@ -313,7 +309,7 @@ def _merged(traction: TractionField) -> LinearData:
     safe = np.where(solid, det, 1.0)
     correction = np.stack([pyy * sx - pxy * sy, pxx * sy - pxy * sx]) / safe
     chi = correction[0] * sx + correction[1] * sy
-    # Median of chi-square with two degrees of freedom: 2 ln 2. Where the fit is poor throughout, nothing is singled out.
+    # Median of chi-square with two degrees of freedom: 2 ln 2. Where the fit is poor throughout, none is singled out.
     usual = float(np.median(chi[solid])) / (2.0 * np.log(2.0)) if solid.any() else 1.0
     kept = solid & (chi < _OUTLIER * max(1.0, usual))
     merged = replace(

@@ -1,12 +1,13 @@
 r"""Evidence for Poisson ratio and thickness together: one surface per field, on a grid that all fields of a gel share.
 
-Thickness enters as :math:`x = \ln(1 + \ell/h)` with :math:`\ell` = 40 um, the length of a cell: 0 for an infinitely thick
-gel, even steps in :math:`\ln h` for a thin one. Between the thicknesses that were computed the surface is interpolated
-(Akima 1970 in the form of makima), and new ones are added where it decides.
+Thickness enters as :math:`x = \ln(1 + \ell/h)` with :math:`\ell` = 40 um, the length of a cell: 0 for an infinitely
+thick gel, even steps in :math:`\ln h` for a thin one. Between the thicknesses that were computed the surface is
+interpolated (Akima 1970 in the form of makima), and new ones are added where it decides.
 """
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -123,13 +124,13 @@ def measure_surface(problem: ReducedProblem, gel: Gel) -> EvidenceSurface:
     """
     thickness = gel.thickness
     thinnest = min(THINNEST, 0.5 * thickness) if thickness is not None else THINNEST
-    grid = np.linspace(0.0, coordinate_of(thinnest), 61)
+    grid = np.linspace(0.0, coordinate_of(thinnest), 121)
     curves: dict[float, _Curve] = {}
     home = coordinate_of(thickness)
     family = gel_family(problem, thickness)
     reference = family.softness(gel.poisson)
     _add(curves, home, family, reference)
-    for x in (*(coordinate_of(h) for h in _LADDER), grid[-1]):
+    for x in (*(coordinate_of(h) for h in _LADDER), float(grid[-1])):
         if all(abs(x - other) > 0.08 for other in curves):
             _add(curves, float(x), _family(problem, float(x)), reference)
     while len(curves) < _MOST_FAMILIES:
@@ -166,7 +167,7 @@ def _undecided(curves: dict[float, _Curve], grid: Array) -> float | None:
     best = {x: float(curves[x].at(POISSON_GRID).max()) for x in xs}
     top = max(best.values())
     wanted: list[tuple[float, float]] = []
-    for left, right in zip(xs[:-1], xs[1:], strict=True):
+    for left, right in itertools.pairwise(xs):
         high = max(best[left], best[right]) - top
         change = abs(best[left] - best[right])
         if right - left > 0.12 and high > -6.0 and change > 1.5:
