@@ -160,7 +160,7 @@ def strip_information(
         return np.ascontiguousarray(image[keep], dtype=np.float32)
 
     # Across frames the product is free of noise, but where beads do not overlap yet it can be negative, and a step
-    # goes the wrong way. Within a frame a step is always downhill and a little short: right on the way, wrong at the end.
+    # goes the wrong way. Within a frame a step is always downhill, a little short: right on the way, wrong at the end.
     other_a, other_b = (true_b, true_a) if final else (true_a, true_b)
     m = [weight * 0.5 * (soft_a[p] * other_a[q] + soft_b[p] * other_b[q]) for p, q in ((0, 0), (0, 1), (1, 0), (1, 1))]
     info = [m[0], 0.5 * (m[1] + m[2]), m[3]]
@@ -253,7 +253,7 @@ def _stray(
     noise /= 2 * np.sqrt(np.pi) * _SMOOTH
     spots = (np.abs(mean) > reject * noise) & (np.abs(mean) > 0.5 * brighter)
     if not spots.any():
-        return spots
+        return np.asarray(spots)
     return np.asarray(gaussian_filter(spots.astype(np.float32), 1.5, truncate=2) > 0.02)
 
 

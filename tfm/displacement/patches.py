@@ -16,6 +16,9 @@ from numpy.typing import NDArray
 
 __all__ = ["PatchSums", "Patches", "effective_area"]
 
+#: Nodes of one product; the window reaches over a few of them, and a block that is too wide multiplies zeros.
+_BLOCK = 16
+
 
 def effective_area(radius: float) -> float:
     """Area (px^2) whose plain average is as noisy as the window's: (int W)^2 / int W^2 = (5/3 R)^2.
@@ -77,7 +80,7 @@ class PatchSums:
     radius: float
     order: int
     with_covariance: bool = True
-    _sums: dict[tuple[str, int, int, int], NDArray[np.float32]] = field(default_factory=dict)
+    _sums: dict[str, NDArray[np.float32]] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
         self._columns = _windows(self.x, np.arange(self.shape[1]), self.radius, 2 * self.order)
@@ -108,19 +111,40 @@ class PatchSums:
         if not len(near):
             return
         window_y = _windows(self.y[near], rows, self.radius, 2 * self.order)
-        top = 2 * self.order
-        jobs = [("M", k, information[k], top, 1) for k in range(3)]
-        jobs += [("h", k, pull[k], self.order, 1) for k in range(2)]
+        self._gather("K", near, window_y[1], np.concatenate([information, pull, squares]))
         if self.with_covariance:
-            jobs += [("V", k, scatter[k], top, 2) for k in range(3)] + [("r", k, squares[k], 0, 1) for k in range(2)]
-        for name, k, image, highest, power in jobs:
-            for j in range(highest + 1):
-                part = window_y[power][j] @ image
-                for i in range(highest + 1 - j):
-                    key = (name, k, i, j)
-                    if key not in self._sums:
-                        self._sums[key] = np.zeros((len(self.y), len(self.x)), dtype=np.float32)
-                    self._sums[key][near] += part @ self._columns[power][i].T
+            self._gather("KK", near, window_y[2], scatter)
+
+    def _gather(
+        self,
+        name: str,
+        near: NDArray[np.intp],
+        window_y: NDArray[np.float32],
+        images: NDArray[np.float32],
+    ) -> None:
+        """Two large matrix products: rows to nodes for all images and powers at once, then columns, block by block."""
+        powers, count, (kinds, rows, width) = len(window_y), len(near), images.shape
+        across = np.ascontiguousarray(images.transpose(1, 0, 2)).reshape(rows, kinds * width)
+        half = (window_y.reshape(powers * count, rows) @ across).reshape(powers * count * kinds, width)
+        if name not in self._sums:
+            self._sums[name] = np.zeros((powers, powers, kinds, len(self.y), len(self.x)), dtype=np.float32)
+        total = self._sums[name]
+        for block in range(0, len(self.x), _BLOCK):
+            nodes = slice(block, min(block + _BLOCK, len(self.x)))
+            left = max(0, int(np.floor(self.x[nodes.start] - self.radius)))
+            right = min(width, int(np.ceil(self.x[nodes.stop - 1] + self.radius)) + 1)
+            window_x = self._columns[2 if name == "KK" else 1][:, nodes, left:right]
+            size = nodes.stop - nodes.start
+            part = half[:, left:right] @ window_x.reshape(powers * size, right - left).T
+            # (powers of y, nodes, images, powers of x, columns) -> (powers of y, powers of x, images, nodes, columns)
+            part = part.reshape(powers, count, kinds, powers, size).transpose(0, 3, 2, 1, 4)
+            total[:, :, :, near[0] : near[-1] + 1, nodes] += part
+
+    def _sum(self, kind: str, component: int, i: int, j: int) -> NDArray[np.float32]:
+        """Sum over the patch of window times x^i y^j times an image; ``kind`` M, h, r (window) or V (its square)."""
+        name, first = {"M": ("K", 0), "h": ("K", 3), "r": ("K", 5), "V": ("KK", 0)}[kind]
+        out: NDArray[np.float32] = self._sums[name][j, i, first + component]
+        return out
 
     def solve(self, *, least_information: float = 4.0) -> Patches:
         """Displacement and covariance of every patch.
@@ -134,13 +158,13 @@ class PatchSums:
         spread = np.zeros((count, size, size)) if self.with_covariance else normal
         for a, (i, j) in enumerate(terms):
             for c in range(2):
-                right[:, 2 * a + c] = self._sums["h", c, i, j].ravel()
+                right[:, 2 * a + c] = self._sum("h", c, i, j).ravel()
             for b, (k, m) in enumerate(terms):
                 for c in range(2):
                     for d in range(2):
-                        normal[:, 2 * a + c, 2 * b + d] = self._sums["M", c + d, i + k, j + m].ravel()
+                        normal[:, 2 * a + c, 2 * b + d] = self._sum("M", c + d, i + k, j + m).ravel()
                         if self.with_covariance:
-                            spread[:, 2 * a + c, 2 * b + d] = self._sums["V", c + d, i + k, j + m].ravel()
+                            spread[:, 2 * a + c, 2 * b + d] = self._sum("V", c + d, i + k, j + m).ravel()
         # Parameters are in px at the window's edge (coordinates are scaled by R). The weak prior (30 px) only keeps
         # empty patches from dividing by nothing.
         normal[:, np.arange(size), np.arange(size)] += 1e-3
@@ -158,20 +182,34 @@ class PatchSums:
         covariance = np.stack([cov[:, 0, 0], cov[:, 0, 1], cov[:, 1, 1]]).reshape(3, *shape)
         misfit = np.full(shape, np.nan)
         if self.with_covariance:
-            got, due = self._sums["r", 0, 0, 0], self._sums["r", 1, 0, 0]
+            got, due = self._sum("r", 0, 0, 0), self._sum("r", 1, 0, 0)
             misfit = np.divide(got, due, out=misfit, where=due > 0).astype(np.float64)
-        down = _windows(self.y, np.arange(self.shape[0]), self.radius, 0)[1][0].sum(axis=1)
-        weight = np.outer(down, self._columns[1][0].sum(axis=1))
-        density = (self._sums["M", 0, 0, 0] + self._sums["M", 2, 0, 0]) / weight
-        with np.errstate(divide="ignore", invalid="ignore"):
-            area = np.where(valid, (trace / det).reshape(shape) / density, np.nan)
+        area = np.full(shape, np.nan)
+        if self.with_covariance:
+            area = np.where(valid, (trace / np.where(ok, det, 1)).reshape(shape) / self._density(), np.nan)
         return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit, area)
+
+
+    def _density(self) -> NDArray[np.float64]:
+        """Information per px^2 around a node, summed over both directions: (mean M)^2 / mean V."""
+        down = _windows(self.y, np.arange(self.shape[0]), self.radius, 0)
+        mean = {
+            name: (self._sum(name, 0, 0, 0) + self._sum(name, 2, 0, 0))
+            / np.outer(down[power][0].sum(axis=1), self._columns[power][0].sum(axis=1))
+            for name, power in (("M", 1), ("V", 2))
+        }
+        return np.asarray(mean["M"] ** 2 / np.maximum(mean["V"], 1e-30), dtype=np.float64)
 
 
 def _windows(
     nodes: NDArray[np.float64], places: NDArray[np.int_], radius: float, highest: int
-) -> dict[int, list[NDArray[np.float32]]]:
-    """Window times powers of the scaled coordinate, ``(nodes, places)``, for the window (1) and its square (2)."""
-    t = (places[None, :] - nodes[:, None]) / radius
-    window = np.clip(1 - t**2, 0, None)
-    return {power: [np.asarray(window**power * t**p, dtype=np.float32) for p in range(highest + 1)] for power in (1, 2)}
+) -> dict[int, NDArray[np.float32]]:
+    """Window (1) and its square (2) times powers of the scaled coordinate, ``(powers, nodes, places)``."""
+    t = ((places[None, :] - nodes[:, None]) / radius).astype(np.float32)
+    window = np.clip(1 - t * t, 0, None)
+    out = {power: np.empty((highest + 1, *t.shape), dtype=np.float32) for power in (1, 2)}
+    out[1][0], out[2][0] = window, window * window
+    for stack in out.values():
+        for k in range(highest):
+            np.multiply(stack[k], t, out=stack[k + 1])
+    return out

@@ -8,8 +8,9 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import gaussian_filter, spline_filter
+from scipy.ndimage import spline_filter
 
+from tfm.displacement.blur import WINDOWS, choose_windows
 from tfm.displacement.grid import fill_smoothly, node_axis, spline_matrix, to_pixels
 from tfm.displacement.information import HALO, FramePair, strip_information
 from tfm.displacement.match import BrightnessSums
@@ -95,11 +96,14 @@ def refine_displacement(
     Each iteration brings the stressed frame back with the present field, gathers the information of every pixel and
     fits local polynomials to it (subset matching with local deformation; Sutton, Orteu & Schreier, Image Correlation,
     Springer 2009, ch. 5, solved for all subsets in one step). Camera noise and brightness are measured from the
-    residuals on the way. Last, every node takes from three windows (affine; quadratic and wide; quadratic) the one of least
-    expected squared error, variance plus squared blur.
+    residuals on the way. Last, every node takes the window of least expected squared error
+    (:func:`tfm.displacement.blur.choose_windows`).
     """
     shape = relaxed.image.shape
     x, y = node_axis(shape[1], spacing_px), node_axis(shape[0], spacing_px)
+    # On the way to convergence a node every half radius carries all that a quadratic window can show.
+    coarse = max(spacing_px, int(min(0.5 * radius, min(shape) / 8)))
+    coarse_x, coarse_y = node_axis(shape[1], coarse), node_axis(shape[0], coarse)
     nodes = _Nodes(start.x, start.y, fill_smoothly(start.u, start.valid))
     dark = relaxed.image[::3, ::3]
     variance = (float((1.4826 * np.median(np.abs(dark - np.median(dark)))) ** 2) + 1e-12, 0.0)
@@ -109,27 +113,29 @@ def refine_displacement(
                      _shared_width(relaxed, stressed))  # fmt: skip
     moves: list[float] = []
     for k in range(most_iterations):
-        sweep = _sweep(pair, nodes, [(x, y, 1.25 * radius, 2)], np.inf, quiet, with_covariance=False)
-        new = _Nodes(x, y, fill_smoothly(sweep.patches[0].u, sweep.patches[0].valid))
+        sweep = _sweep(pair, nodes, [(coarse_x, coarse_y, 1.25 * radius, 2)], np.inf, quiet, with_covariance=False)
+        new = _Nodes(coarse_x, coarse_y, fill_smoothly(sweep.patches[0].u, sweep.patches[0].valid))
         moves.append(_largest_move(nodes, new))
         nodes = new
         pair = replace(pair, variance=sweep.variance, gain=sweep.gain, offset=sweep.offset)
-        if k >= 1 and moves[-1] < 0.05:
+        if k >= 1 and moves[-1] < 0.1:
             break
-    windows = [(x, y, radius, 1), (x, y, 1.25 * radius, 2), (x, y, radius, 2)]
+    windows = [(x, y, factor * radius, order) for order, factor in WINDOWS]
     last = _sweep(pair, nodes, windows, _REJECT, quiet, with_covariance=True)
-    chosen = _choose(last.patches)
+    chosen = choose_windows(last.patches)
     settings = {
         "refinement": "patches with local deformation",
-        "window_radius_px": [radius, 1.25 * radius, radius],
-        "window_order": [1, 2, 2],
+        "window_radius_px": [factor * radius for _, factor in WINDOWS],
+        "window_order": [order for order, _ in WINDOWS],
+        "window_shares": list(chosen.shares),
+        "blur_factors": list(chosen.blur_factors),
         "iterations": len(moves) + 1,
         "last_move_px": moves[-1],
         "camera_noise": list(last.variance),
         "lost_share": last.lost,
     }
-    u, covariance, valid, area, misfit = chosen
-    return RefinedField(x, y, u, covariance, valid, area, misfit, last.variance, last.lost, settings)
+    return RefinedField(x, y, chosen.u, chosen.covariance, chosen.valid, chosen.area, chosen.misfit, last.variance,
+                        last.lost, settings)  # fmt: skip
 
 
 def _shared_width(relaxed: PreparedFrame, stressed: PreparedFrame) -> float:
@@ -178,38 +184,3 @@ def _sweep(
 def _largest_move(before: _Nodes, now: _Nodes) -> float:
     old = to_pixels(before.u, spline_matrix(before.y, now.y), spline_matrix(before.x, now.x))
     return float(np.quantile(np.hypot(*(now.u - old)), 0.99))
-
-
-def _choose(
-    patches: list[Patches],
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.bool_], NDArray[np.float64], NDArray[np.float64]]:
-    """At every node the window of least variance plus squared blur; the blur is measured against the last window."""
-    sharp = patches[-1]
-    best = np.full(sharp.valid.shape, np.inf)
-    u, covariance = np.full_like(sharp.u, np.nan), np.full_like(sharp.covariance, np.nan)
-    area, misfit = np.full_like(best, np.nan), np.full_like(best, np.nan)
-    for patch in patches:
-        blur = _squared_blur(patch, sharp) if patch is not sharp else np.zeros_like(best)
-        total = np.where(patch.valid, patch.covariance[0] + patch.covariance[2] + blur, np.inf)
-        better = total < best
-        best = np.where(better, total, best)
-        u = np.where(better, patch.u, u)
-        widened = patch.covariance + 0.5 * blur * np.array([1.0, 0.0, 1.0])[:, None, None]
-        # Residuals above their expectation say that more than noise is at work: the variance grows with them.
-        widened *= np.maximum(1, patch.misfit)
-        covariance = np.where(better, widened, covariance)
-        # The vector carries the information of the ground that it is worth: less where blur widened its error.
-        own = patch.area * (patch.covariance[0] + patch.covariance[2]) / (widened[0] + widened[2])
-        area, misfit = np.where(better, own, area), np.where(better, patch.misfit, misfit)
-    valid = np.isfinite(best) & (misfit < 3)
-    return np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, area, misfit
-
-
-def _squared_blur(patch: Patches, sharp: Patches) -> NDArray[np.float64]:
-    """Squared difference to the sharp window beyond what noise explains, averaged over neighbours; never below 0."""
-    both = patch.valid & sharp.valid
-    trace = sharp.covariance[0] + sharp.covariance[2] - patch.covariance[0] - patch.covariance[2]
-    excess = np.where(both, ((patch.u - sharp.u) ** 2).sum(axis=0) - trace, 0.0)
-    share = gaussian_filter(both.astype(float), 1.0)
-    mean = gaussian_filter(excess, 1.0) / np.maximum(share, 1e-3)
-    return np.asarray(np.maximum(mean, 0.0))
