@@ -249,8 +249,11 @@ def test_contrast_width_and_looks(built: Path, open_page: Callable[..., Any], wi
 
 
 def test_prints_without_controls(built: Path, open_page: Callable[..., Any]) -> None:
-    page = open_page(built / "report.html")
+    page = open_page(built / "report.html", width=794, height=1123)  # A4 at 96 dots per inch
     page.emulate_media(media="print")
+    names = page.eval_on_selector_all("#fields .name", "all => all.map(e => e.getClientRects().length)")
+    assert max(names) <= 3
+    assert page.evaluate("document.documentElement.scrollWidth") <= 794
     assert not page.locator("#controls").is_visible()
     assert not page.locator(".choice >> nth=0").is_visible()
     assert page.locator("#fields tbody tr >> nth=8").is_visible()

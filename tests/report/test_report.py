@@ -133,3 +133,14 @@ def test_several_processes_draw_the_same(make_folder: Callable[..., Path], tmp_p
     for path in sorted(one.glob("figures/**/*.*")):
         assert path.read_bytes() == (two / path.relative_to(one)).read_bytes()
     assert (one / "report.html").read_bytes() == (two / "report.html").read_bytes()
+
+
+@pytest.mark.parametrize(("changed", "good"), [(False, True), (True, False)])
+def test_all_good_is_said_only_when_every_output_is_proven(
+    make_folder: Callable[..., Path], tmp_path: Path, changed: bool, good: bool
+) -> None:
+    root = make_folder(tmp_path / "results", fields=3, bad=0)
+    if changed:  # one bit that no reader of the file would notice
+        with h5py.File(root / "fields" / "f0.nc", "r+") as file:
+            file["displacement"].attrs["remark"] = "touched"
+    assert ("All good: 3 of 3" in build_report(root).read_text(encoding="utf-8")) is good

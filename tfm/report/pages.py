@@ -126,6 +126,7 @@ def _index(results: Results, drawn: Mapping[str, Pictures], environment: Environ
     kept = [f for f in results.fields if f.name not in excluded]
     groups = groups_of(kept)
     found = differences(groups)
+    look = first_look(results.fields, {n: p.measures for n, p in drawn.items()})
     sheet = [dict(f.sheet) for f in results.fields if f.sheet]
     return environment.get_template("report.html").render(
         title=results.root.resolve().name,
@@ -136,8 +137,8 @@ def _index(results: Results, drawn: Mapping[str, Pictures], environment: Environ
         cell_count=sum(len(f.cell_names) for f in results.fields),
         method=_setting(results.run, "method"),
         version=_version(results.run),
-        state_sentence=_state_sentence(results, drawn, len(excluded)),
-        look=first_look(results.fields, {n: p.measures for n, p in drawn.items()}),
+        state_sentence=_state_sentence(results, drawn, len(excluded), len(look)),
+        look=look,
         verdict=verdict_sentence(groups, found),
         comparisons=found,
         moments_alt=_moments_alt(groups),
@@ -183,8 +184,8 @@ def _moments_alt(groups: Sequence[Group]) -> str:
     return "Contractile moment of every cell by condition. " + " ".join(parts)
 
 
-def _state_sentence(results: Results, drawn: Mapping[str, Pictures], excluded: int) -> str:
-    """How much there is, and how much of it was proven to be whole; 'all good' only for N of N."""
+def _state_sentence(results: Results, drawn: Mapping[str, Pictures], excluded: int, listed: int) -> str:
+    """How much there is, and how much was proven whole; 'all good' only for N of N with nothing to look at."""
     total, counts = len(results.fields), results.counts()
     usable = [f for f in results.fields if f.status in ("ok", "caution")]
     whole = sum(_verified(f, drawn[f.name]) for f in usable)
@@ -192,7 +193,12 @@ def _state_sentence(results: Results, drawn: Mapping[str, Pictures], excluded: i
         f"{len(usable)} of {total} fields gave numbers; the outputs of {whole} of these were verified by their hashes."
     )
     if total and counts["ok"] == total == whole:
-        text = f"All good: {total} of {total} fields are ok, and their outputs were verified by their hashes."
+        text = f"{total} of {total} fields are ok, and their outputs were verified by their hashes."
+        text = (
+            f"All good: {text}"
+            if not listed
+            else f"{text} {listed} of them {'is' if listed == 1 else 'are'} past a limit."
+        )
     if excluded:
         text += f" {excluded} marked 'exclude' {'is' if excluded == 1 else 'are'} left out of the comparison."
     return text

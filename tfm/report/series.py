@@ -55,7 +55,8 @@ def series_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
     across = min(len(frames), _ACROSS)
     step, high = tall + 0.32, rows * (tall + 0.32) + 0.1
     figure = new_figure(across * (_EDGE + 0.1), high)
-    peak = max(float(np.nanpercentile(np.hypot(*b.traction), 99.9)) for b in frames if b.traction is not None) / 1e3
+    sizes = [np.hypot(*b.traction) for b in frames if b.traction is not None]
+    peak = max((float(np.percentile(s[s > 0], 99.7)) for s in sizes if (s > 0).any()), default=1e3) / 1e3
     scale = dipole_scale(field.cells, right - left)
     for i, b in enumerate(frames):
         if b.traction is None or b.xt is None or b.yt is None:
@@ -66,7 +67,7 @@ def series_figure(field: FieldResult, a: FieldArrays) -> Figure | None:
         ax.set_facecolor(GROUND)
         size = np.hypot(*b.traction) / 1e3
         extent = plots.extent_of(b.xt, b.yt)
-        ax.imshow(np.ma.masked_equal(size, 0), cmap=TRACTION_MAP, vmin=0, vmax=peak or 1.0, extent=extent)
+        ax.imshow(np.ma.masked_equal(size, 0), cmap=TRACTION_MAP, vmin=0, vmax=peak, extent=extent)
         if b.labels is not None:
             plots.draw_outlines(ax, b.xt, b.yt, b.labels, names=False)
         here = rows_of_frame(field.cells, b.frame)
