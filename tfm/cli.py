@@ -150,15 +150,26 @@ def run(
         from tfm.population.beat_table import write_beats
 
         write_beats(output, output / "beats.csv")
-    page = None
+    page, fault = None, None
     if report and finished:
-        from tfm.report import build_report
-
-        page = build_report(output)
+        page, fault = _report(output)
     command = "tfm " + " ".join(_quoted(a) for a in sys.argv[1:] if a != "--redo")
     for line in summary_lines(summary, output, report=page, command=command):
         say(line)
+    if fault is not None:
+        raise fault
     return summary.exit_code
+
+
+def _report(output: Path) -> tuple[Path | None, Exception | None]:
+    """The report of finished results; what goes wrong with it must not hide that the tables are complete."""
+    try:
+        from tfm.report import build_report
+
+        return build_report(output), None
+    except Exception as error:  # raised again after the summary
+        say(f"the tables in {output} are complete, but the report failed; 'tfm report' builds it again")
+        return None, error
 
 
 def _quoted(text: str) -> str:

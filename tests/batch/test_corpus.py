@@ -1,4 +1,4 @@
-"""The corpus of bad images and outlines through whole runs: good rows unchanged, bad ones failed with a code, exit 1."""
+"""The corpus of bad images and outlines through whole runs: good rows unchanged, bad ones failed with a code."""
 
 from __future__ import annotations
 

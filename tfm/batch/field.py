@@ -39,6 +39,8 @@ class FieldResult:
         Table rows without the columns that the sheet gives.
     gel
         The row of gel.csv, or None when the field failed.
+    gel_evidence
+        Log evidence against Poisson ratio and thickness, in the tables' units.
     budget
         One entry per cell and frame: variance of the contractile moment by source, (pN m)^2.
     quality
@@ -55,6 +57,7 @@ class FieldResult:
     pairs: list[dict[str, Any]] = field(default_factory=list)
     fields: list[dict[str, Any]] = field(default_factory=list)
     gel: dict[str, Any] | None = None
+    gel_evidence: dict[str, Any] = field(default_factory=dict)
     budget: list[dict[str, Any]] = field(default_factory=list)
     quality: dict[str, Any] = field(default_factory=dict)
     statistics: list[dict[str, Any]] = field(default_factory=list)
@@ -138,8 +141,16 @@ def measure_field(
         writer.times(np.arange(frames) * run.interval)
     if run.best is not None:
         since = time.perf_counter()
-        run.result.gel = gel_row(row, settings, run.best, run.best_dipoles, source.gel, change=_is_change(source))
+        run.result.gel, run.result.gel_evidence = gel_row(
+            row, settings, run.best, run.best_dipoles, source.gel, pixel=source.pixel, change=_is_change(source)
+        )
         run.spent("gel", since)
+        run.result.quality = {
+            "method": run.best.traction.method,
+            "outline": run.best.outlines.source,
+            "pixel_size_um": source.pixel * 1e6,
+            "lattice_um": run.best.traction.spacing * 1e6,
+        }
     run.result.settle()
     return run.result
 

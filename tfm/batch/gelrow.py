@@ -5,10 +5,14 @@ from __future__ import annotations
 import math
 from typing import Any
 
+import numpy as np
+
 from tfm.batch.frames import FrameResult
 from tfm.batch.rows import join_notes
 from tfm.batch.settings import RowValues, RunSettings
+from tfm.errors import TfmError
 from tfm.gel import Gel
+from tfm.gelcheck import GelEvidence, check_gel
 from tfm.moments import CellDipole
 from tfm.units import from_si
 
@@ -41,15 +45,19 @@ def gel_row(
     dipoles: tuple[CellDipole, ...],
     gel: Gel,
     *,
+    pixel: float,
     change: bool,
-) -> dict[str, Any]:
-    """The row of gel.csv, without the field's name, from the frame that stores most energy."""
+) -> tuple[dict[str, Any], dict[str, Any]]:
+    """The row of gel.csv without the field's name, and the evidence curves for the report.
+
+    Both are of the frame that stores most energy: there the beads say most.
+    """
     energy = sum(d.strain_energy for d in dipoles)
     found: dict[str, Any] = {
         "youngs_modulus_Pa": gel.youngs_modulus,
         "poisson": gel.poisson,
-        "thickness_um": None if gel.thickness is None else from_si(gel.thickness, "um"),
-        "strain_energy_fJ": from_si(energy, "fJ") if math.isfinite(energy) else None,
+        "thickness_um": _um(gel.thickness),
+        "strain_energy_fJ": _fj(energy),
         "verdict": "cannot tell",
     }
     notes = []
@@ -57,5 +65,50 @@ def gel_row(
         notes.append("no thickness was entered: the gel is treated as infinitely thick")
     if change:
         notes.append("energies are changes against the frame of least pull, not totals")
-    found["notes"] = join_notes(notes)
-    return found
+    if not settings.gel_check:
+        notes.append("the gel was not tested: asked for by --no-gel-check")
+        return {**found, "notes": join_notes(notes)}, {}
+    try:
+        evidence = check_gel(frame.traction, dipoles, shear=row.shear_modulus is not None, pixel_size=pixel)
+    except TfmError as error:  # the dipoles stand without it
+        notes.append(f"the gel could not be tested: {error.message}")
+        return {**found, "notes": join_notes(notes)}, {}
+    found |= {
+        "poisson_best": evidence.poisson_best,
+        "poisson_low": evidence.poisson_low,
+        "poisson_high": evidence.poisson_high,
+        "thickness_best_um": _um(evidence.thickness_best),
+        "thickness_low_um": _um(evidence.thickness_low),
+        "thickness_high_um": _um(evidence.thickness_high),
+        "energy_shift_poisson_fJ": _fj(evidence.energy_shift_poisson),
+        "strain_peak": evidence.strain_peak,
+        "verdict": evidence.verdict,
+        "notes": join_notes(notes, evidence.notes),
+    }
+    return found, _curves(evidence)
+
+
+def _um(value: float | None) -> float | None:
+    return None if value is None or not math.isfinite(value) else from_si(value, "um")
+
+
+def _fj(value: float | None) -> float | None:
+    return None if value is None or not math.isfinite(value) else from_si(value, "fJ")
+
+
+def _curves(evidence: GelEvidence) -> dict[str, Any]:
+    """Log evidence against Poisson ratio and against thickness (um), where there is any."""
+    curves: dict[str, Any] = {}
+    for name, values, log_evidence in (
+        ("poisson", evidence.poisson, evidence.poisson_log_evidence),
+        ("thickness", evidence.thickness, evidence.thickness_log_evidence),
+    ):
+        if values is None or log_evidence is None:
+            continue
+        finite = np.isfinite(values) & np.isfinite(log_evidence)
+        scale = from_si(1.0, "um") if name == "thickness" else 1.0
+        curves[name] = {
+            "value": (values[finite] * scale).tolist(),
+            "log_evidence": log_evidence[finite].tolist(),
+        }
+    return curves

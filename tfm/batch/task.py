@@ -246,6 +246,7 @@ def _measure(
                 "fields": result.fields,
             },
             "outputs": outputs,
+            "gel_evidence": result.gel_evidence,
             "budget": result.budget,
             "quality": result.quality,
             "statistics": result.statistics,
