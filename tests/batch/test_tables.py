@@ -150,3 +150,11 @@ def test_a_problem_is_one_line_whatever_was_typed() -> None:
     assert str(problem).isprintable()
     assert len(str(problem)) < 600
     assert readable("\u202etxt") == "\\u202etxt"
+
+
+def test_the_page_on_bad_input_lists_the_cases_that_the_tests_hold() -> None:
+    import reliability_table
+
+    text = reliability_table.PAGE.read_text(encoding="utf-8")
+    assert reliability_table.block() in text, "run tests/batch/reliability_table.py"
+    assert sum(sum(c.values()) for c in reliability_table.cases().values()) >= 120
