@@ -195,3 +195,33 @@ def test_frames_of_a_series_are_read_one_by_one(make_folder: Callable[..., Path]
     assert first.traction is not None
     assert last.traction is not None
     assert np.allclose(last.traction, 1.6 * first.traction, rtol=1e-5, atol=0)
+
+
+def test_pictures_inside_vector_files_are_small_and_unchanged() -> None:
+    """Whatever colours a picture has, packing it tighter does not change one pixel."""
+    import base64
+    import io
+    import re
+
+    from PIL import Image
+
+    from tfm.report.files import svg_text
+    from tfm.report.style import drawing, new_figure
+
+    rng = np.random.default_rng(4)
+    values = rng.integers(0, 200, (64, 64)) / 199
+    kinds = {"gray": "L", "viridis": "P", "any": "RGBA"}
+    with drawing():
+        for name, mode in kinds.items():
+            figure = new_figure(2, 2)
+            axes = figure.add_axes((0, 0, 1, 1))
+            axes.set_axis_off()
+            image = rng.random((64, 64, 3)) if name == "any" else values
+            axes.imshow(image, cmap=None if name == "any" else name, vmin=0, vmax=1)
+            packed = re.search(r"data:image/png;base64,([^\"]+)", svg_text(figure, title="a"))
+            assert packed is not None
+            picture = Image.open(io.BytesIO(base64.b64decode(packed.group(1))))
+            assert picture.mode == mode
+            expected = image if name == "any" else colormaps[name](values)[..., :3]
+            seen = np.asarray(picture.convert("RGB"), dtype=float) / 255
+            assert np.abs(np.sort(seen.ravel()) - np.sort(expected.ravel())).max() < 2.5 / 255

@@ -144,3 +144,28 @@ def test_all_good_is_said_only_when_every_output_is_proven(
         with h5py.File(root / "fields" / "f0.nc", "r+") as file:
             file["displacement"].attrs["remark"] = "touched"
     assert ("All good: 3 of 3" in build_report(root).read_text(encoding="utf-8")) is good
+
+
+@pytest.mark.parametrize(
+    "lost",
+    [
+        ("relaxed_image", "stressed_image", "residual_image"),  # a displacement field measured elsewhere
+        (
+            "displacement",
+            "displacement_precision",
+            "relaxed_image",
+            "stressed_image",
+            "residual_image",
+        ),  # a traction field
+        ("traction", "traction_displacement", "labels"),
+        ("labels",),
+    ],
+)
+def test_draws_what_is_there(make_folder: Callable[..., Path], tmp_path: Path, lost: tuple[str, ...]) -> None:
+    root = make_folder(tmp_path / "results", fields=1, bad=0)
+    with h5py.File(root / "fields" / "f0.nc", "r+") as file:
+        for name in lost:
+            del file[name]
+    page = _read(build_report(root).parent / "figures" / "plate-001" / "index.html")
+    assert len([s for s in page.sources if s.endswith("maps.svg")]) == 1
+    assert (root / "figures" / "plate-001" / "thumb.webp").exists()

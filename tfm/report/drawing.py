@@ -26,7 +26,7 @@ from tfm.report.words import alt_maps, cell_sentence, plain
 __all__ = ["DRAWING_VERSION", "Picture", "Pictures", "draw_field", "strongest_frame"]
 
 #: Raise when figures change, so that pictures of earlier versions are drawn anew.
-DRAWING_VERSION = 5
+DRAWING_VERSION = 6
 
 
 @dataclass(frozen=True)

@@ -33,19 +33,23 @@ def write_bytes(path: Path, content: bytes) -> Path:
 
 
 def _smaller(match: re.Match[str]) -> str:
-    """The same picture as a palette PNG, when its colours allow: maps and posterised beads have at most 256."""
+    """The same picture with one byte a pixel, when its colours allow: grey beads, maps of at most 256 colours."""
     raw = base64.b64decode(match.group(1))
     picture: Image.Image = Image.open(io.BytesIO(raw))
-    if picture.getcolors(256) is None:
-        return match.group(0)
-    best = raw
     if picture.mode == "RGBA" and picture.getchannel("A").getextrema() == (255, 255):
         picture = picture.convert("RGB")
-    if picture.mode == "RGB":
-        buffer = io.BytesIO()
-        picture.quantize(256, dither=Image.Dither.NONE).save(buffer, "PNG")
-        best = min(raw, buffer.getvalue(), key=len)
-    return "data:image/png;base64," + base64.b64encode(best).decode()
+    if picture.mode != "RGB":
+        return match.group(0)
+    red, green, blue = picture.split()
+    if red == green == blue:
+        picture = red
+    elif picture.getcolors(256) is not None:
+        picture = picture.quantize(256, dither=Image.Dither.NONE)
+    else:
+        return match.group(0)
+    buffer = io.BytesIO()
+    picture.save(buffer, "PNG")
+    return "data:image/png;base64," + base64.b64encode(min(raw, buffer.getvalue(), key=len)).decode()
 
 
 def svg_text(figure: Figure, *, title: str) -> str:
