@@ -42,7 +42,9 @@ def test_bounded_error_bar_is_the_scatter():
     draws = []
     for seed in range(16):
         cell = known_cell(gel, noise=2e-8, seed=seed, n=160, pixel=0.5e-6)
-        (found,) = cell_dipoles(infer_bounded(cell.field, cell.pixel, cell.outlines, gel, most_coefficients=400), cell.outlines, cell.pixel)
+        (found,) = cell_dipoles(
+            infer_bounded(cell.field, cell.pixel, cell.outlines, gel, most_coefficients=400), cell.outlines, cell.pixel
+        )
         draws.append((found.contractile_moment, found.contractile_moment_sd))
     moments, quoted = np.array(draws).T
     ratio = np.sum((moments - moments.mean()) ** 2) / np.mean(quoted) ** 2
@@ -69,7 +71,13 @@ def test_rotation_turns_the_tensor():
     gel = GELS[1]
     cell = known_cell(gel, noise=1e-9)
     u = np.stack([-np.rot90(cell.field.u[1], -1), np.rot90(cell.field.u[0], -1)])
-    p = np.stack([np.rot90(cell.field.precision[2], -1), -np.rot90(cell.field.precision[1], -1), np.rot90(cell.field.precision[0], -1)])
+    p = np.stack(
+        [
+            np.rot90(cell.field.precision[2], -1),
+            -np.rot90(cell.field.precision[1], -1),
+            np.rot90(cell.field.precision[0], -1),
+        ]
+    )
     # The grid reaches one pixel further at one side than at the other; its mirror image does the opposite.
     last = (cell.outlines.labels.shape[0] - 1) * cell.pixel
     turned = replace(cell.field, u=u, precision=p, x=last - cell.field.y[::-1], y=cell.field.x)
@@ -98,7 +106,9 @@ def test_fourier_error_bar_is_the_scatter_of_the_noise():
     draws = []
     for seed in range(24):
         cell = known_cell(gel, noise=1e-8, seed=seed, n=160, pixel=0.5e-6)
-        (found,) = cell_dipoles(infer_fourier(cell.field, cell.pixel, cell.outlines, gel, choice="discrepancy"), cell.outlines, cell.pixel)
+        (found,) = cell_dipoles(
+            infer_fourier(cell.field, cell.pixel, cell.outlines, gel, choice="discrepancy"), cell.outlines, cell.pixel
+        )
         draws.append((found.contractile_moment, found.contractile_moment_sd))
     moments, quoted = np.array(draws).T
     ratio = np.sum((moments - moments.mean()) ** 2) / np.mean(quoted) ** 2

@@ -107,11 +107,13 @@ def test_balance_is_conditioning(small_problem):
         theirs.append(joint - stats.multivariate_normal.logpdf(np.zeros(3), cov=balance))
         assert np.abs(b @ mean).max() < 1e-9 * np.abs(mean).max()
     # p(d | balance) = p(d, balance) / p(balance); the record leaves p(balance) out, which for a proper prior is not flat.
-    balance_change = np.diff([stats.multivariate_normal.logpdf(np.zeros(3), cov=a**2 * b @ k @ b.T / 25.0) for a in (200.0, 600.0)])
+    balance_change = np.diff(
+        [stats.multivariate_normal.logpdf(np.zeros(3), cov=a**2 * b @ k @ b.T / 25.0) for a in (200.0, 600.0)]
+    )
     np.testing.assert_allclose(np.diff(ours), np.diff(theirs) + balance_change, rtol=1e-3, atol=2e-2)
 
 
-@pytest.mark.parametrize("shape", ["inside", "band"])
+@pytest.mark.parametrize("shape", ["even", "band"])
 def test_prior_is_the_ratio_of_two_normal_densities(small_problem, shape):
     """p(T) = N(T; 0, K) / N(F T; 0, F K F^T), both by scipy.stats; the moments F T are then flat."""
     from tfm.traction.prior import shape_weight
@@ -120,7 +122,9 @@ def test_prior_is_the_ratio_of_two_normal_densities(small_problem, shape):
     (prior,) = make_prior(basis, lattice, length=2e-6, shape=shape)
     p = np.stack([basis.node_rows, basis.node_columns], axis=1) * 1e-6
     w = shape_weight(basis.node_depth * 1e-6, shape)
-    single = matern(np.hypot(*(p[:, None] - p[None]).transpose(2, 0, 1)), 2e-6) * w[:, None] * w + 1e-8 * np.eye(basis.size)
+    single = matern(np.hypot(*(p[:, None] - p[None]).transpose(2, 0, 1)), 2e-6) * w[:, None] * w + 1e-8 * np.eye(
+        basis.size
+    )
     k = linalg.block_diag(single, single)
     f = first_moments(basis, lattice, 1)
     f /= np.linalg.norm(f, axis=1, keepdims=True)
@@ -155,7 +159,9 @@ def test_nodes_are_a_partition_of_unity_that_keeps_first_moments():
     np.testing.assert_allclose(np.asarray(basis.weights.sum(axis=1)).ravel(), 1.0, rtol=1e-12)
     # Hats reproduce linear functions away from the rim (finite elements: bilinear completeness).
     deep = basis.rows.size - 1
-    inner = (covered[np.clip(basis.rows - 3, 0, None), basis.columns] > 0) & (covered[basis.rows + 3, basis.columns] > 0)
+    inner = (covered[np.clip(basis.rows - 3, 0, None), basis.columns] > 0) & (
+        covered[basis.rows + 3, basis.columns] > 0
+    )
     inner &= (covered[basis.rows, basis.columns - 3] > 0) & (covered[basis.rows, basis.columns + 3] > 0)
     assert inner.sum() > 50
     assert deep > 100

@@ -22,7 +22,7 @@ from tfm.traction.result import make_result
 __all__ = ["LENGTHS", "choose_step", "infer_bounded", "vector_data", "whole_groups"]
 
 #: Correlation lengths that the evidence chooses from, m: from a small adhesion to a whole protrusion.
-LENGTHS: tuple[float, ...] = (0.7e-6, 1.0e-6, 1.4e-6, 2.0e-6, 2.8e-6, 4.0e-6, 5.7e-6)
+LENGTHS: tuple[float, ...] = (0.7e-6, 1.0e-6, 1.4e-6, 2.0e-6, 2.8e-6, 4.0e-6)
 
 
 def choose_step(covered: NDArray[np.int32], *, most: int = 1100) -> int:
@@ -94,7 +94,7 @@ def first_guess(data: LinearData, gel: Gel) -> tuple[Component, ...]:
     guess = max(gel.youngs_modulus * float(np.quantile(size, 0.95)) / 10e-6, 1e-3 * gel.youngs_modulus * 1e-3)
     none = np.zeros(0)
     return tuple(
-        Component(1.0 / len(SHAPES), shape, 1.4e-6, np.full(labels.size, guess), none, none, 0.0) for shape in SHAPES
+        Component(1.0 / len(SHAPES), shape, 1.0e-6, np.full(labels.size, guess), none, none, 0.0) for shape in SHAPES
     )
 
 
@@ -122,7 +122,7 @@ def solve(
     normal = normal_equations(data, gel, response=response)
     begin = first_guess(data, gel) if start is None else tuple(start)
     # A correlation length well below the node spacing cannot be represented.
-    usable = [v for v in LENGTHS if v >= 0.6 * data.basis.step * data.lattice.spacing] or [LENGTHS[-1]]
+    usable = [v for v in LENGTHS if v >= 0.45 * data.basis.step * data.lattice.spacing] or [LENGTHS[-1]]
     lengths = usable if search else sorted({c.length for c in begin})
     solution = best_posterior(data, normal, start=begin, lengths=lengths, tolerance=tolerance, priors=priors)
     return solution, normal

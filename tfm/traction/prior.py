@@ -19,10 +19,10 @@ from tfm.traction.lattice import Lattice, NodeBasis
 
 __all__ = ["SHAPES", "CellPrior", "first_moments", "make_prior", "matern", "shape_weight"]
 
-#: Where inside the outline adhesions are looked for: anywhere but at the very rim, or rather in a band along it.
-SHAPES = ("inside", "band")
-_FADE = 0.8e-6  # m: adhesions lie inside the drawn rim, so the amplitude grows from it over this depth
-_BAND = 4.0e-6  # m: width of the band along the rim where most adhesions sit
+#: Where inside the outline adhesions are looked for: anywhere, or rather in a band along the rim.
+SHAPES = ("even", "band")
+_FADE = 0.4e-6  # m: in the band, the amplitude grows from the drawn rim over this depth
+_BAND = 3.0e-6  # m: width of the band along the rim where most adhesions sit
 
 
 @dataclass(frozen=True)
@@ -84,23 +84,22 @@ def first_moments(basis: NodeBasis, lattice: Lattice, label: int) -> NDArray[np.
 def shape_weight(depth: NDArray[np.float64], shape: str) -> NDArray[np.float64]:
     """Amplitude of the field against the depth below the rim (m), between 0 and 1.
 
-    ``inside`` grows from the rim over 0.8 um and stays; ``band`` also falls to a quarter towards the middle, because adhesions
+    ``even`` is 1 everywhere; ``band`` rises from the rim over 0.4 um and falls to a tenth towards the middle, because adhesions
     gather along the rim (common practice). Neither is true of every cell: results average over both, and their difference
     is part of the error bar.
 
     Examples
     --------
-    >>> shape_weight(np.array([0.0, 3e-6, 20e-6]), "band").round(2).tolist()
-    [0.12, 0.67, 0.26]
+    >>> shape_weight(np.array([0.0, 1e-6, 20e-6]), "band").round(2).tolist()
+    [0.24, 0.85, 0.1]
     """
+    if shape == "even":
+        return np.ones_like(depth)
     d = np.maximum(depth, 0.1e-6)
-    rise = 1.0 - np.exp(-d / _FADE) + 0.02
-    if shape == "inside":
-        return np.asarray(rise)
-    return np.asarray(rise * (0.25 + 0.75 * np.exp(-((d / _BAND) ** 2))))
+    return np.asarray((1.0 - np.exp(-d / _FADE) + 0.02) * (0.1 + 0.9 * np.exp(-((d / _BAND) ** 2))))
 
 
-def make_prior(basis: NodeBasis, lattice: Lattice, *, length: float, shape: str = "inside") -> tuple[CellPrior, ...]:
+def make_prior(basis: NodeBasis, lattice: Lattice, *, length: float, shape: str = "even") -> tuple[CellPrior, ...]:
     """The prior of every cell for one correlation length (m) and one of :data:`SHAPES`."""
     result = []
     n = basis.size
