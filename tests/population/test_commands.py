@@ -14,7 +14,7 @@ import xarray as xr
 from tfm.errors import InputError, TfmError
 from tfm.gel import Gel
 from tfm.population.beat_table import BEAT_COLUMNS, write_beats
-from tfm.population.commands import write_export, write_map, write_plan, write_stiffness
+from tfm.population.commands import write_conditions, write_export, write_map, write_plan, write_stiffness
 from tfm.population.plan import Setup
 from tfm.population.tables import measured_cells, read_folder
 
@@ -85,6 +85,21 @@ def test_stiffness_writes_tables_a_figure_and_says_the_answer(results):
     assert not list(results.glob("out/.*"))
 
 
+def test_conditions_are_compared_on_any_number_of_gels(results):
+    rows = table(results / "cells.csv")
+    for row in rows:
+        row["condition"] = "drug" if row["field"].endswith(("0", "1")) else "control"
+    write_rows(results / "cells.csv", list(rows[0]), rows)
+    said = write_conditions([results], results / "out")
+    difference = table(results / "out/comparisons.csv")
+    assert [(r["first"], r["second"]) for r in difference] == [("drug", "control")]
+    # The same stiffnesses in both groups: no difference.
+    assert float(difference[0]["low_pNm"]) < 0 < float(difference[0]["high_pNm"])
+    assert {r["condition"]: r["cells"] for r in table(results / "out/conditions.csv")} == {"drug": "6", "control": "6"}
+    assert (results / "out/conditions.png").stat().st_size > 5_000
+    assert any("drug: " in line and "over 6 cells" in line for line in said)
+
+
 def test_the_error_of_the_modulus_comes_from_the_sheet(results):
     cells, _ = measured_cells(read_folder(results))
     assert cells[0].youngs_modulus == 2000
@@ -129,7 +144,7 @@ def test_a_map_loads_with_units(results):
 
 def test_plan_ranks_what_helps(tmp_path):
     setup = Setup(Gel(5e3, 0.45), 0.5e-6, 112, 0.1e12, 400, 0.6e-6, 8, 1.5, 22e-6, 11e-6, 0.3e-12, distance=60e-6)
-    said = write_plan(setup, tmp_path, cells=1)
+    said = write_plan(setup, tmp_path, cells=1, most_coefficients=120)
     rows = table(tmp_path / "plan.csv")
     assert rows[0]["change"] == "as asked"
     assert [float(r["better_by"]) for r in rows[1:]] == sorted((float(r["better_by"]) for r in rows[1:]), reverse=True)

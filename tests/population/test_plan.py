@@ -27,7 +27,7 @@ SETUP = Setup(
     contractile_moment=0.3e-12,
     distance=50e-6,
 )
-FAST = {"cells": 1, "most_coefficients": 160}
+FAST = {"cells": 1, "most_coefficients": 100}
 
 
 def test_information_is_the_scatter_of_a_maximum_likelihood_shift():
@@ -74,11 +74,11 @@ def test_the_scatter_of_repeats_is_what_was_promised():
     information = bead_information(per_px2, 500, 1.25, 8, 1.5) / SETUP.pixel_size**4
     trace = np.array([-1.0, 0.0, -1.0])
     rng = np.random.default_rng(3)
-    found = [plan._measure(SETUP, cell, information, 160, rng) for _ in range(40)]
+    found = [plan._measure(SETUP, cell, information, 100, rng) for _ in range(24)]
     z = np.array([(trace @ m.estimate - 0.3e-12) / np.sqrt(trace @ m.covariance @ trace) for m in found])
     scatter = np.std([trace @ m.estimate for m in found])
     promised = np.median([np.sqrt(trace @ m.covariance @ trace) for m in found])
-    assert scatter == pytest.approx(promised, rel=0.4)
+    assert scatter == pytest.approx(promised, rel=0.45)
     assert abs(z.mean()) < 1.5
 
 

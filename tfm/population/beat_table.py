@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tfm.population.beats import Beat, beat_pair, measure_beat
-from tfm.population.commands import write_text
+from tfm.population.output import write_text
 from tfm.population.tables import read_rows, row_number
 from tfm.units import to_si
 

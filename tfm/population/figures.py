@@ -13,12 +13,12 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import LogLocator, NullFormatter, StrMethodFormatter
 from numpy.typing import NDArray
 
-from tfm.population.conditions import MeasuredCell
+from tfm.population.conditions import ConditionSummary, MeasuredCell
 from tfm.population.maps import EnergyMap
 from tfm.population.plan import ExpectedErrors, ranked
 from tfm.population.stiffness import StiffnessFit, coupling_strength, saturating_moment
 
-__all__ = ["draw_energy_map", "draw_plan", "draw_stiffness"]
+__all__ = ["draw_conditions", "draw_energy_map", "draw_plan", "draw_stiffness"]
 
 _INK, _SOFT, _FIT, _SECOND = "#1c1c1c", "#767676", "#1f5a96", "#b35806"
 _STYLE: Any = {"font.size": 10.0, "axes.spines.top": False, "axes.spines.right": False, "svg.hashsalt": "tfm"}
@@ -86,6 +86,35 @@ def draw_stiffness(path: Path, cells: Sequence[MeasuredCell], fit: StiffnessFit)
         bottom.set_ylim(0, 1.1)
         bottom.set_ylabel("relative to its best")
         bottom.set_xlabel("Young's modulus (kPa)")
+        _save(figure, path)
+
+
+def draw_conditions(path: Path, cells: Sequence[MeasuredCell], summaries: Sequence[ConditionSummary]) -> None:
+    """Every cell, and per condition the mean with its 95 % interval (bar) and the spread between cells (box)."""
+    with rc_context(_STYLE):
+        figure = Figure(figsize=(max(4.0, 1.6 + 1.2 * len(summaries)), 4.0), layout="constrained")
+        axes = figure.subplots()
+        for place, summary in enumerate(summaries):
+            group = [cell for cell in cells if cell.condition == summary.condition]
+            y = np.array([cell.contractile_moment for cell in group]) * 1e12
+            sd = np.sqrt([cell.contractile_moment_variance for cell in group]) * 1e12
+            # A fixed, even spread sideways: the same picture every time, and error bars side by side.
+            x = place - 0.28 + 0.2 * (np.argsort(np.argsort(y)) + 0.5) / y.size
+            axes.errorbar(x, y, sd, fmt="o", ms=4, color=_SOFT, mfc="white", elinewidth=0.8)
+            m = summary.moment
+            if m.spread is not None:
+                low, height = (m.mean - m.spread) * 1e12, 2 * m.spread * 1e12
+                axes.bar(place + 0.15, height, bottom=low, width=0.22, color=_FIT, alpha=0.18, lw=0)
+            if m.mean_low is not None and m.mean_high is not None:
+                axes.plot([place + 0.15] * 2, [m.mean_low * 1e12, m.mean_high * 1e12], color=_FIT, lw=2)
+            axes.plot([place + 0.15], [m.mean * 1e12], "s", ms=6, color=_FIT)
+        axes.set_xticks(range(len(summaries)), [f"{s.condition}\n{s.cells} cells" for s in summaries])
+        axes.set_xlim(-0.5, len(summaries) - 0.5)
+        axes.axhline(0, color=_SOFT, lw=0.6)
+        axes.set_ylabel("contractile moment (pN m)")
+        axes.set_title(
+            "circles: cells ± 1 sd; square: mean, 95 % interval; box: spread between cells", fontsize=8, loc="left"
+        )
         _save(figure, path)
 
 

@@ -21,7 +21,7 @@ from tfm.moments import axis_deviation
 from tfm.synth import SyntheticCell, cell_displacements, displacement_at, make_cell_traction
 from tfm.traction.blocks import make_blocks
 from tfm.traction.bounded import choose_step, solve, whole_groups
-from tfm.traction.gaussian import LinearData
+from tfm.traction.gaussian import Component, LinearData
 from tfm.traction.lattice import cover_outlines, image_lattice, make_nodes
 from tfm.traction.prior import first_moments
 
@@ -209,6 +209,8 @@ class _Measured:
     functionals: NDArray[np.float64]
     covariance: NDArray[np.float64]
     estimate: NDArray[np.float64]
+    components: tuple[Component, ...]
+    moment: float
     peak: float
 
 
@@ -243,6 +245,8 @@ def _measure(
         functionals=functionals,
         covariance=functionals @ solution.covariance @ functionals.T,
         estimate=functionals @ solution.mean,
+        components=solution.components,
+        moment=setup.contractile_moment,
         peak=float(np.sqrt((field**2).sum(axis=0)).max()),
     )
 
@@ -257,7 +261,11 @@ def _smallest_moment(setup: Setup, measured: _Measured) -> float:
             return new
         moment = new
         value = measured.exact * (moment / setup.contractile_moment) + measured.noise
-        solution, _ = solve(replace(measured.data, value=value), setup.gel, response=measured.response)
+        # The lengths stay, the strength of the prior follows the weaker pull.
+        weaker = tuple(replace(c, amplitudes=c.amplitudes * (moment / measured.moment)) for c in measured.components)
+        solution, _ = solve(
+            replace(measured.data, value=value), setup.gel, start=weaker, response=measured.response, search=False
+        )
         covariance = measured.functionals @ solution.covariance @ measured.functionals.T
     return moment
 
@@ -277,7 +285,7 @@ def _pair(setup: Setup, dipole: NDArray[np.float64], covariance: NDArray[np.floa
 
 
 def expected_errors(
-    setup: Setup, *, cells: int = 3, seed: int = 1, most_coefficients: int = 700, efficiency: float = METHOD_EFFICIENCY
+    setup: Setup, *, cells: int = 3, seed: int = 1, most_coefficients: int = 300, efficiency: float = METHOD_EFFICIENCY
 ) -> ExpectedErrors:
     """Expected error bars of a setup.
 
@@ -290,7 +298,7 @@ def expected_errors(
     seed
         Of the invented cells.
     most_coefficients
-        Size of the dense problem, as in the inversion.
+        Size of the dense problem. The inversion takes 1,100; from 250 on the expected error changes by less than 3 %.
     efficiency
         Share of the photon limit that the method keeps.
 
