@@ -81,6 +81,8 @@ def choose_windows(patches: list[Patches], *, most_misfit: float = 3.0) -> Chose
     taken = np.full(d.shape, -1)
     u, covariance = np.full_like(sharp.u, np.nan), np.full_like(sharp.covariance, np.nan)
     area, misfit = np.full_like(d, np.nan), np.full_like(d, np.nan)
+    # The camera's noise was measured one step before the end; the median misfit of the last step corrects it.
+    level = float(np.median(wide.misfit[wide.valid])) if wide.valid.any() else 1.0
     for k, (patch, factor) in enumerate(zip(patches, blur_factors, strict=True)):
         blur = factor * d
         total = np.where(patch.valid, _trace(patch) + blur, np.inf)
@@ -88,7 +90,7 @@ def choose_windows(patches: list[Patches], *, most_misfit: float = 3.0) -> Chose
         best, taken = np.where(better, total, best), np.where(better, k, taken)
         # Residuals above their expectation say that more than noise is at work: the variance grows with them.
         widened = patch.covariance + 0.5 * blur * np.array([1.0, 0.0, 1.0])[:, None, None]
-        widened *= np.maximum(1, patch.misfit)
+        widened *= np.maximum(level, patch.misfit)
         u, covariance = np.where(better, patch.u, u), np.where(better, widened, covariance)
         # A vector carries the information of the ground that it is worth: less where its error was widened.
         own = patch.area * _trace(patch) / (widened[0] + widened[2])

@@ -33,10 +33,14 @@ class FramePair:
         ``(ny, nx)`` float32, what was subtracted (it carries noise too).
     usable_relaxed, usable_stressed
         ``(ny, nx)`` bool.
+    linear
+        ``(ny, nx)`` bool, where the relaxed frame is not saturated.
     gain, offset
         ``(ny, nx)`` float32: stressed = gain * relaxed + offset.
     variance
         ``(c0, c1)``: variance = c0 + c1 * counts.
+    least_variance
+        counts^2, no pixel is believed to be quieter.
     bead_width
         px, standard deviation of a bead's image; 0 = unknown.
     order
@@ -49,9 +53,11 @@ class FramePair:
     floor_stressed: NDArray[np.float32]
     usable_relaxed: NDArray[np.bool_]
     usable_stressed: NDArray[np.bool_]
+    linear: NDArray[np.bool_]
     gain: NDArray[np.float32]
     offset: NDArray[np.float32]
     variance: tuple[float, float]
+    least_variance: float
     bead_width: float = 0.0
     order: int = 3
 
@@ -140,7 +146,7 @@ def strip_information(
     c0, c1 = pair.variance
     level_a = smooth_a + pair.floor_relaxed[top:bottom]
     level_b = smooth_b * gain + pair.offset[top:bottom] + pair.floor_stressed[top:bottom]
-    floor = 0.25 * abs(c0) + 1e-12 if c0 > 0 else 1e-12
+    floor = pair.least_variance
     var_a = np.maximum(c0 + c1 * level_a, floor)
     var_b = np.maximum(c0 + c1 * level_b, floor) / gain**2
     residual = b - a

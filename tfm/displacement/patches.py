@@ -186,7 +186,8 @@ class PatchSums:
             misfit = np.divide(got, due, out=misfit, where=due > 0).astype(np.float64)
         area = np.full(shape, np.nan)
         if self.with_covariance:
-            area = np.where(valid, (trace / np.where(ok, det, 1)).reshape(shape) / self._density(), np.nan)
+            density = self._density()
+            np.divide((trace / np.where(ok, det, 1)).reshape(shape), density, out=area, where=valid & (density > 0))
         return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit, area)
 
 
@@ -198,7 +199,8 @@ class PatchSums:
             / np.outer(down[power][0].sum(axis=1), self._columns[power][0].sum(axis=1))
             for name, power in (("M", 1), ("V", 2))
         }
-        return np.asarray(mean["M"] ** 2 / np.maximum(mean["V"], 1e-30), dtype=np.float64)
+        density = np.zeros(mean["M"].shape)
+        return np.divide(mean["M"].astype(np.float64) ** 2, mean["V"], out=density, where=mean["V"] > 1e-12)
 
 
 def _windows(

@@ -6,12 +6,12 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import binary_dilation, gaussian_filter
+from scipy.ndimage import binary_dilation, gaussian_filter, maximum_filter, minimum_filter
 
 from tfm.displacement.grid import spline_matrix, to_pixels
 from tfm.errors import InputError, MeasurementError
 
-__all__ = ["PreparedFrame", "bead_width", "prepare_frame", "sharpest_plane"]
+__all__ = ["PreparedFrame", "bead_width", "brightness_ratio", "prepare_frame", "sharpest_plane"]
 
 _TILE = 48
 
@@ -27,7 +27,10 @@ class PreparedFrame:
     background
         ``(ny, nx)`` float32, what was taken off (counts), smooth.
     usable
-        ``(ny, nx)`` bool, False on hot, dead, saturated and not-finite pixels.
+        ``(ny, nx)`` bool, False on hot, dead, not-finite and masked (constant) pixels.
+    linear
+        ``(ny, nx)`` bool, False on and around saturated pixels. Their flanks still tell where a bead is, so they are
+        matched; but their noise is cut off, so they say nothing about the camera's noise or the brightness.
     saturated, hot
         Number of pixels at the top of the camera's range, and of single pixels that stand out.
     """
@@ -35,6 +38,7 @@ class PreparedFrame:
     image: NDArray[np.float32]
     background: NDArray[np.float32]
     usable: NDArray[np.bool_]
+    linear: NDArray[np.bool_]
     saturated: int
     hot: int
 
@@ -45,7 +49,8 @@ def prepare_frame(image: NDArray[np.floating], *, saturation: float | None = Non
     The background is a low quantile (25 %) of tiles of 48 px, smoothed and spline-interpolated: beads cover less than
     a quarter of the ground in any usable image. Hot pixels stand out from their four neighbours by more than any bead
     can (a bead's image, even at the resolution limit, puts at least a quarter of its peak into each neighbour);
-    saturated pixels are a plateau at the largest value. Neither is repaired into a measurement: ``usable`` is False.
+    saturated pixels are a plateau at the largest value. Hot pixels take no part; saturated ones are kept out of the
+    noise and the brightness.
 
     Parameters
     ----------
@@ -84,11 +89,13 @@ def prepare_frame(image: NDArray[np.floating], *, saturation: float | None = Non
     raw[~finite] = np.median(raw[finite])
     flat_top = _saturated(raw, saturation)
     hot = _hot_pixels(raw) & ~binary_dilation(flat_top)
-    bad = ~finite | flat_top | hot
+    blank = _blank_ground(raw)
+    bad = ~finite | hot | blank
     if hot.any() or not finite.all():
         raw = _closed(raw, hot | ~finite)
     background = _smooth_background(raw)
-    return PreparedFrame(raw - background, background, ~bad, int(flat_top.sum()), int(hot.sum()))
+    linear = ~binary_dilation(flat_top, iterations=3) if flat_top.any() else np.ones(raw.shape, dtype=bool)
+    return PreparedFrame(raw - background, background, ~bad, linear, int(flat_top.sum()), int(hot.sum()))
 
 
 def _saturated(raw: NDArray[np.float32], saturation: float | None) -> NDArray[np.bool_]:
@@ -103,6 +110,14 @@ def _saturated(raw: NDArray[np.float32], saturation: float | None) -> NDArray[np
     if count >= 6 and count > 1.5 * near:
         return at_top
     return np.zeros(raw.shape, dtype=bool)
+
+
+def _blank_ground(raw: NDArray[np.float32]) -> NDArray[np.bool_]:
+    """Ground that someone masked: 7 x 7 pixels of exactly one value, and a rim, for the mask's edge is no bead."""
+    flat = maximum_filter(raw, 7) == minimum_filter(raw, 7)
+    if not flat.any():
+        return np.asarray(flat)
+    return np.asarray(maximum_filter(flat, 2 * (3 + 4) + 1))
 
 
 def _hot_pixels(raw: NDArray[np.float32]) -> NDArray[np.bool_]:
@@ -160,6 +175,26 @@ def bead_width(image: NDArray[np.float32], usable: NDArray[np.bool_] | None = No
     if lags[1] <= 0 or lags[0] <= lags[1]:
         return float("nan")
     return float(np.sqrt(0.75 / np.log(lags[0] / lags[1])))
+
+
+def brightness_ratio(relaxed: PreparedFrame, stressed: PreparedFrame) -> np.float32:
+    """Brightness of the stressed frame's beads over the relaxed one's, whatever their displacement; 1 when unknown.
+
+    Root of the ratio of the autocovariances at 1 px, into which pixel noise does not fall.
+
+    Examples
+    --------
+    >>> rng = np.random.default_rng(0)
+    >>> dots = 1000 * gaussian_filter((rng.random((96, 96)) < 0.02).astype(float), 1.5)
+    >>> frames = [prepare_frame(factor * dots + rng.normal(100, 1, dots.shape)) for factor in (1.0, 0.5)]
+    >>> round(float(brightness_ratio(*frames)), 1)
+    0.5
+    """
+    power = []
+    for frame in (relaxed, stressed):
+        a = np.where(frame.usable, frame.image - np.median(frame.image), 0)
+        power.append(0.5 * (float(np.mean(a[:, 1:] * a[:, :-1])) + float(np.mean(a[1:] * a[:-1]))))
+    return np.float32(np.sqrt(power[1] / power[0]) if min(power) > 0 else 1.0)
 
 
 def sharpest_plane(stack: NDArray[np.floating]) -> int:

@@ -127,7 +127,7 @@ def bead_count(frame: PreparedFrame) -> tuple[int, float, float]:
     # The lower half of the ground is free of beads; its spread below the median is that of a half normal distribution.
     low = smooth[smooth <= level]
     spread = float(np.sqrt(np.mean((low - level) ** 2))) + 1e-12
-    tops = (smooth == maximum_filter(smooth, 3)) & (smooth > level + 4 * spread) & frame.usable
+    tops = (smooth == maximum_filter(smooth, 3)) & (smooth > level + 4 * spread)
     rough = frame.image[:, 1:] - frame.image[:, :-1]
     dark = (smooth[:, 1:] < level + spread) & (smooth[:, :-1] < level + spread)
     noise = float(np.sqrt(0.5 * np.mean(rough[dark] ** 2))) if dark.any() else float("nan")

@@ -17,12 +17,14 @@ from tfm.displacement.match import BrightnessSums
 from tfm.displacement.noise import camera_noise
 from tfm.displacement.patches import Patches, PatchSums
 from tfm.displacement.piv import PivField
-from tfm.displacement.prepare import PreparedFrame, bead_width
+from tfm.displacement.prepare import PreparedFrame, bead_width, brightness_ratio
 
 __all__ = ["RefinedField", "refine_displacement"]
 
 #: Residual, in standard deviations over a bead, beyond which a bead counts as lost or added.
 _REJECT = 6.0
+#: px; when 99 % of the nodes move less than this, one more step is the last.
+_SETTLED = 0.25
 
 
 @dataclass(frozen=True)
@@ -76,6 +78,7 @@ class _Sweep:
 
     patches: list[Patches]
     variance: tuple[float, float]
+    least_variance: float
     gain: NDArray[np.float32]
     offset: NDArray[np.float32]
     lost: float
@@ -108,17 +111,22 @@ def refine_displacement(
     dark = relaxed.image[::3, ::3]
     variance = (float((1.4826 * np.median(np.abs(dark - np.median(dark)))) ** 2) + 1e-12, 0.0)
     ones, zeros = np.ones(shape, dtype=np.float32), np.zeros(shape, dtype=np.float32)
+    level = brightness_ratio(relaxed, stressed)
     pair = FramePair(relaxed.image, spline_filter(stressed.image, 3, output=np.float32), relaxed.background,
-                     stressed.background, relaxed.usable, stressed.usable, ones, zeros, variance,
+                     stressed.background, relaxed.usable, stressed.usable, relaxed.linear, level * ones, zeros, variance,
+                     0.5 * variance[0],
                      _shared_width(relaxed, stressed))  # fmt: skip
     moves: list[float] = []
-    for k in range(most_iterations):
+    for _ in range(most_iterations):
         sweep = _sweep(pair, nodes, [(coarse_x, coarse_y, 1.25 * radius, 2)], np.inf, quiet, with_covariance=False)
         new = _Nodes(coarse_x, coarse_y, fill_smoothly(sweep.patches[0].u, sweep.patches[0].valid))
         moves.append(_largest_move(nodes, new))
         nodes = new
-        pair = replace(pair, variance=sweep.variance, gain=sweep.gain, offset=sweep.offset)
-        if k >= 1 and moves[-1] < 0.1:
+        pair = replace(
+            pair, variance=sweep.variance, least_variance=sweep.least_variance, gain=sweep.gain, offset=sweep.offset
+        )
+        # The last sweep is a step of its own, and a step leaves a tenth of the way or less.
+        if moves[-1] < _SETTLED:
             break
     windows = [(x, y, factor * radius, order) for order, factor in WINDOWS]
     last = _sweep(pair, nodes, windows, _REJECT, quiet, with_covariance=True)
@@ -155,29 +163,33 @@ def _sweep(
     height, width = pair.relaxed.shape
     sums = [PatchSums(wx, wy, (height, width), radius, order, with_covariance) for wx, wy, radius, order in windows]
     brightness = BrightnessSums((height, width))
-    columns = spline_matrix(nodes.x, np.arange(width, dtype=np.float64))
+    columns = np.ascontiguousarray(spline_matrix(nodes.x, np.arange(width, dtype=np.float64)).T)
     samples: list[NDArray[np.float32]] = []
     lost = used = 0
     thin = max(1, int(np.sqrt(height * width / 250_000)))
     for block in range(len(brightness.rows) - 1):
         first, last = int(brightness.rows[block]), int(brightness.rows[block + 1])
         rows = np.arange(max(0, first - HALO), min(height, last + HALO))
-        u = to_pixels(nodes.u, spline_matrix(nodes.y, rows), columns)
+        u = to_pixels(nodes.u, spline_matrix(nodes.y, rows), columns.T)
         strip = strip_information(pair, u, first, last, reject=reject, final=with_covariance)
         for part in sums:
             part.add(first, strip.information, strip.pull, strip.scatter, strip.squares)
-        brightness.add(block, strip.relaxed, strip.warped, strip.used)
+        honest = strip.used & pair.linear[first:last]
+        brightness.add(block, strip.relaxed, strip.warped, honest)
         lost += strip.lost
         used += int(strip.used.sum())
-        ground = strip.used if quiet is None else strip.used & quiet[first:last]
+        ground = honest if quiet is None else honest & quiet[first:last]
         pick = ground[::thin, ::thin]
         samples.append(
             np.stack([part[::thin, ::thin][pick] for part in (strip.residual, strip.units, strip.level)])
         )
     residual, units, level = np.concatenate(samples, axis=1)
     variance = camera_noise(residual, units, level) if residual.size > 2000 else pair.variance
+    # Half the variance of the darkest ground: what falls below is a fault of the straight line, not a better pixel.
+    darkest = float(np.quantile(level, 0.02)) if level.size else 0.0
+    least = max(0.5 * (variance[0] + variance[1] * darkest), 1e-9)
     gain, offset = brightness.maps()
-    return _Sweep([part.solve() for part in sums], variance, gain * pair.gain, offset * pair.gain + pair.offset,
+    return _Sweep([part.solve() for part in sums], variance, least, gain * pair.gain, offset * pair.gain + pair.offset,
                   lost / max(1, used + lost))  # fmt: skip
 
 
