@@ -1,7 +1,7 @@
 """Runs of the batch that are killed at every write, in forked children of one process (run as a script by the tests).
 
-An audit hook counts what touches files for writing (open, rename, remove, mkdir); at the n-th event the process kills
-itself with SIGKILL, which nothing can catch. HDF5 writes from C and is not seen by the hook: random times cover it.
+An audit hook counts what touches files for writing (open, rename, remove, mkdir), and every file is written in two
+halves with an event between them; at the n-th event the process kills itself with SIGKILL, which nothing can catch.
 """
 
 from __future__ import annotations
@@ -27,17 +27,31 @@ NAMES = ["a", "b", "bad-1", "d"]
 _count, _limit, _watch = 0, -1, ""
 
 
-def _hook(event: str, args: tuple[Any, ...]) -> None:
+def _tick(place: str) -> None:
+    """One event; the n-th kills."""
     global _count
-    if _limit < 0 or event not in ("open", "os.rename", "os.remove", "os.mkdir"):
-        return
-    if event == "open" and not (isinstance(args[2], int) and args[2] & (os.O_WRONLY | os.O_RDWR)):
-        return
-    if _watch not in str(args[0]):
+    if _limit < 0 or _watch not in place:
         return
     _count += 1
     if _count == _limit:
         os.kill(os.getpid(), signal.SIGKILL)
+
+
+def _write_in_halves(self: Path, data: bytes) -> int:
+    """``Path.write_bytes`` with an event in the middle of the file."""
+    with self.open("wb", buffering=0) as stream:
+        stream.write(data[: len(data) // 2])
+        _tick(str(self))
+        stream.write(data[len(data) // 2 :])
+    return len(data)
+
+
+def _hook(event: str, args: tuple[Any, ...]) -> None:
+    if _limit < 0 or event not in ("open", "os.rename", "os.remove", "os.mkdir"):
+        return
+    if event == "open" and not (isinstance(args[2], int) and args[2] & (os.O_WRONLY | os.O_RDWR)):
+        return
+    _tick(str(args[0]))
 
 
 def _run(sheet: Path, out: Path, seen: list[Outcome] | None = None) -> None:
@@ -117,6 +131,7 @@ def main() -> None:
     global _limit, _watch, _count
     folder, mode, number = Path(sys.argv[1]), sys.argv[2], int(sys.argv[3])
     sys.addaudithook(_hook)
+    Path.write_bytes = _write_in_halves  # type: ignore[method-assign,assignment]
     sheet = make_sheet(folder, NAMES)
     _run(sheet, folder / "whole")
     want = {name: (folder / "whole" / name).read_bytes() for name in TABLES}
