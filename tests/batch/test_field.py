@@ -17,8 +17,10 @@ from numpy.typing import NDArray
 from tfm.batch.run import RunOptions, RunSummary, run_sheet
 from tfm.batch.settings import RunSettings
 from tfm.gel import Gel
+from tfm.gelcheck import GelEvidence
 from tfm.synth.cells import make_cell_traction
 from tfm.synth.fields import SyntheticField, make_field
+from tfm.traction import TractionField
 
 CHECKER = Path(__file__).parents[3] / "shared" / "check_results.py"
 HEAD = "field,stressed,relaxed,outline,pixel,youngs_modulus,youngs_modulus_sd,poisson,thickness,condition"
@@ -180,6 +182,28 @@ def test_swapped_images_are_suspected_by_the_sign(study: tuple[Path, SyntheticFi
     assert float(cell["contractile_moment_pNm"]) < 0
     assert cell["status"] == "caution"
     assert "are the stressed and the relaxed image swapped?" in cell["notes"]
+
+
+def test_a_contradicted_gel_makes_every_number_a_caution(
+    study: tuple[Path, SyntheticField], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    import tfm.batch.gelrow as gelrow
+
+    folder, _ = study
+
+    def contradicted(traction: TractionField, *_: object, **__: object) -> GelEvidence:
+        return GelEvidence(gel=traction.gel, verdict="contradicted", poisson_best=0.45, notes=("nu is wrong",))
+
+    monkeypatch.setattr(gelrow, "check_gel", contradicted)
+    sheet = folder / "sheet.csv"
+    sheet.write_text(f"{HEAD.replace('stressed,relaxed', 'displacement')}\none,u.csv,o.tif,{GEL}\n")
+    assert run_sheet(sheet, tmp_path).exit_code == 0
+    for name, key in (("cells", "notes"), ("fields", "message")):
+        (row,) = _rows(tmp_path, f"{name}.csv")
+        assert row["status"] == "caution"
+        assert "the beads contradict the gel that was entered" in row[key]
+    (gel,) = _rows(tmp_path, "gel.csv")
+    assert (gel["verdict"], gel["notes"], gel["poisson_best"]) == ("contradicted", "nu is wrong", "0.45")
 
 
 def _stack(folder: Path, frames: list[NDArray[np.uint16]], name: str) -> None:

@@ -63,6 +63,13 @@ class FieldResult:
     statistics: list[dict[str, Any]] = field(default_factory=list)
     seconds: dict[str, float] = field(default_factory=dict)
 
+    def warn(self, note: str) -> None:
+        """Add a sentence to every row that gives a number, and make it ``caution``."""
+        for row in (*self.cells, *self.pairs, *self.fields):
+            if row["status"] != "failed":
+                key = "message" if "message" in row else "notes"
+                row["status"], row[key] = "caution", join_notes([row[key], note])
+
     def settle(self) -> None:
         """Set status and message from the rows."""
         words = [row["status"] for row in (*self.fields, *self.cells, *self.pairs)]
@@ -144,6 +151,8 @@ def measure_field(
         run.result.gel, run.result.gel_evidence = gel_row(
             row, settings, run.best, run.best_dipoles, source.gel, pixel=source.pixel, change=_is_change(source)
         )
+        if run.result.gel["verdict"] == "contradicted":
+            run.result.warn("the beads contradict the gel that was entered: see gel.csv")
         run.spent("gel", since)
         run.result.quality = {
             "method": run.best.traction.method,
