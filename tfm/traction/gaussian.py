@@ -315,16 +315,24 @@ def _strengthen(
 ) -> tuple[Component, int]:
     """Amplitude of every cell by maximum evidence (MacKay's fixed point, extrapolated in log amplitude)."""
     log_a = np.log(start)
+    ceiling = np.full(log_a.shape, np.inf)
     old_step: NDArray[np.float64] | None = None
+    found: Component | None = None
     for iteration in range(1, 31):
-        mean, covariance, log_evidence, determined = posterior(normal, prior, np.exp(log_a))
+        try:
+            mean, covariance, log_evidence, determined = posterior(normal, prior, np.exp(log_a))
+        except ConvergenceError:
+            # So weak a prior that the beads do not determine the rest: step back, and never that far again.
+            if iteration > 8:
+                raise
+            ceiling = log_a - 0.5
+            log_a = log_a - 1.5
+            old_step = None
+            continue
+        found = Component(1.0, "", 0.0, np.exp(log_a), mean, covariance, log_evidence)
         size = np.array([float(mean[c.index] @ (c.precision @ mean[c.index])) for c in prior])
         target = 0.5 * np.log(np.maximum(size, 1e-300) / np.maximum(determined, 0.5))
-        # The evidence of a faint cell has its maximum at no structure at all, a traction that only grows outwards from the
-        # middle. Real cells pull at spots: the rest is never fainter than the mean traction
-        # (on invented cells with spots of 1-8 um^2 well-determined amplitudes are 1.7 to 3 times its root mean square).
-        floor = np.log([1.5 * np.sqrt(np.mean(mean[c.index] ** 2)) + 1e-30 for c in prior])
-        step = np.clip(np.maximum(target, floor) - log_a, -1.5, 1.5)
+        step = np.minimum(np.maximum(target, _faintest(prior, mean)), ceiling) - log_a
         if np.all(np.abs(step) < tolerance):
             break
         if old_step is None:
@@ -333,8 +341,21 @@ def _strengthen(
             rate = np.clip(step / np.where(np.abs(old_step) > 1e-12, old_step, 1.0), -0.5, 0.7)
             move = step / (1.0 - rate)
         old_step = step
-        log_a = log_a + np.clip(move, -1.5, 1.5)
-    return Component(1.0, "", 0.0, np.exp(log_a), mean, covariance, log_evidence), iteration
+        log_a = np.minimum(log_a + np.clip(move, -1.5, 1.5), ceiling)
+    if found is None:
+        raise _undetermined()
+    return found, iteration
+
+
+def _faintest(prior: Sequence[CellPrior], mean: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Log of the smallest amplitude that is believed of each cell.
+
+    The evidence of a faint cell has its maximum at no structure at all, a traction that only grows outwards from the middle.
+    Real cells pull at spots, so the rest is at least 2.5 times as strong as the smoothest traction with the same moments (on
+    invented cells with spots of 1-8 um^2 well-determined amplitudes are 2 to 5 times its root mean square).
+    """
+    smooth = [1e-30 if c.moments is None else np.sqrt(np.sum((c.moments @ mean[c.index]) ** 2) / c.index.size) for c in prior]
+    return np.log(2.5 * np.maximum(smooth, 1e-30))
 
 
 def fixed_posterior(

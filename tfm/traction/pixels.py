@@ -100,6 +100,8 @@ class _Step:
     scale: float
     efficiency: float
     misfit: float
+    ring_misfit: float
+    ring_bound: float
     rejected: int
 
 
@@ -140,8 +142,12 @@ def _linearise(
     near = kept & (loop.blocks.distance <= 6e-6 / loop.lattice.spacing)
     used = near if near.sum() > 20 else kept
     misfit = float(chi[used].sum() / (2.0 * used.sum())) / scale
+    ring = kept & (loop.blocks.distance > 0) & (loop.blocks.distance * loop.lattice.spacing < 4e-6)
+    ring_misfit = float(chi[ring].mean() / 2.0) / scale if ring.sum() > 10 else 1.0
+    # Half a chi-square of two degrees of freedom has standard deviation 1 per block.
+    ring_bound = 1.0 + max(0.5, 5.0 / np.sqrt(max(int(ring.sum()), 1)))
     data = replace(loop.data, value=now + shift * loop.pixel, precision=precision, weighted=weighted)
-    return _Step(data, terms, scale, efficiency, misfit, int(filled.sum() - kept.sum()))
+    return _Step(data, terms, scale, efficiency, misfit, ring_misfit, ring_bound, int(filled.sum() - kept.sum()))
 
 
 def _dipole_rows(data: LinearData) -> NDArray[np.float64]:
@@ -237,10 +243,15 @@ def infer_image(
         notes.append(
             f"the images are not explained under the cell (misfit {step_data.misfit:.1f}, expected 1): check outline, focus and gel"
         )
+    if step_data.ring_misfit > step_data.ring_bound and step_data.ring_misfit > step_data.misfit:
+        notes.append(
+            f"beads just outside the outline move more than traction inside it explains (misfit {step_data.ring_misfit:.1f}, "
+            "expected 1): adhesions may reach beyond the outline, or a neighbour pulls; draw it wider"
+        )
     statistics = {
         "steps": len(state.moves), "converged": state.converged, "last_move_sd": state.moves[-1],
         "noise_gain": state.noise.gain, "noise_floor": state.noise.floor, "noise_scale": step_data.scale,
-        "efficiency": step_data.efficiency, "blocks_rejected": step_data.rejected, "bead_sigma_px": state.width, "block_px": b,
+        "efficiency": step_data.efficiency, "blocks_rejected": step_data.rejected, "ring_misfit": step_data.ring_misfit, "bead_sigma_px": state.width, "block_px": b,
         "seconds": time.perf_counter() - began,
     }  # fmt: skip
     return make_result(
@@ -314,7 +325,7 @@ def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fi
         move = float(np.max(np.abs(new - dipole) / sd))
         dipole = new
         state = replace(state, solution=solution, step=step, moves=(*state.moves, move))
-        if move < tolerance and (fine or near_end) and number > 3:
+        if move < tolerance and (fine or near_end) and number > 2:
             return replace(state, converged=True)
     return replace(state, converged=False)
 

@@ -41,6 +41,8 @@ class CellPrior:
         Its rank.
     log_normaliser
         Logarithm of the density's constant at amplitude 1 Pa, without the powers of 2 pi.
+    moments
+        ``(6, 2 n_l)`` orthonormal rows that span the flat moments; None for a prior without flat directions.
     """
 
     label: int
@@ -48,6 +50,7 @@ class CellPrior:
     precision: NDArray[np.float64]
     rank: int
     log_normaliser: float
+    moments: NDArray[np.float64] | None = None
 
 
 def matern(distance: NDArray[np.float64], length: float) -> NDArray[np.float64]:
@@ -122,6 +125,13 @@ def make_prior(basis: NodeBasis, lattice: Lattice, *, length: float, shape: str 
         precision = linalg.block_diag(inverse, inverse) - f.T @ linalg.solve(fkf, f, assume_a="pos")
         log_normaliser = -2.0 * np.log(np.diag(factor)).sum() + 0.5 * np.linalg.slogdet(fkf)[1]
         result.append(
-            CellPrior(int(label), np.concatenate([nodes, nodes + n]), 0.5 * (precision + precision.T), rank, float(log_normaliser))
+            CellPrior(
+                int(label),
+                np.concatenate([nodes, nodes + n]),
+                0.5 * (precision + precision.T),
+                rank,
+                float(log_normaliser),
+                linalg.qr(f.T, mode="economic")[0].T,
+            )
         )
     return tuple(result)

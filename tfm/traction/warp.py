@@ -12,7 +12,7 @@ residual by :math:`g \cdot \delta u` (digital image correlation; Hild & Roux, St
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -59,6 +59,17 @@ class FramePair:
     coefficients: Float32
     trusted_relaxed: Float32
     trusted_stressed: Float32
+    cache: dict[float, tuple[Float32, Float32]] = field(default_factory=dict, compare=False, repr=False)
+
+    def relaxed_gradient(self, smoothing: float) -> tuple[Float32, Float32]:
+        """Gradient of the relaxed frame (x, y), smoothed by a Gaussian of so many pixels; kept, as the frame never changes."""
+        if smoothing not in self.cache:
+            if smoothing == 0.0:
+                self.cache[smoothing] = _gradient(self.relaxed)
+            else:
+                gx, gy = self.relaxed_gradient(0.0)
+                self.cache[smoothing] = (_smooth(gx, smoothing), _smooth(gy, smoothing))
+        return self.cache[smoothing]
 
 
 @dataclass(frozen=True)
@@ -195,6 +206,26 @@ def _gradient(image: Float32) -> tuple[Float32, Float32]:
     return out[0], out[1]
 
 
+def _smooth(image: Float32, sigma: float) -> Float32:
+    return np.asarray(ndimage.gaussian_filter(image, sigma, truncate=3.0), np.float32)
+
+
+def _brightness_ratio(relaxed: Float32, carried: Float32, weight: Float32, *, block: int = 8) -> Float32:
+    """Local factor that matches the stressed frame's contrast to the relaxed one's, over about 40 px.
+
+    Lamps drift and beads bleach. The contrast is compared in blocks of 8 px, which loses nothing at that scale.
+    """
+    ny, nx = relaxed.shape[0] // block * block, relaxed.shape[1] // block * block
+    power = []
+    for image in (relaxed, carried):
+        square = _smooth(image, 1.5) ** 2 * weight
+        tiles = square[:ny, :nx].reshape(ny // block, block, nx // block, block).mean(axis=(1, 3))
+        power.append(ndimage.gaussian_filter(tiles, 40.0 / block, mode="nearest"))
+    ratio = np.clip(np.sqrt(np.maximum(power[0], 1e-12) / np.maximum(power[1], 1e-12)), 0.05, 20.0)
+    up = [resample_matrix(n, m, block) for n, m in zip(relaxed.shape, ratio.shape, strict=True)]
+    return np.asarray(np.clip(up[0] @ ratio.astype(np.float32) @ up[1].T, 0.05, 20.0), np.float32)
+
+
 def _interpolation_noise(shift: Float32) -> Float32:
     """Share of a white frame's variance that survives cubic-spline interpolation at a fraction of a pixel, per axis.
 
@@ -238,22 +269,20 @@ def pixel_terms(
         if bad.min() < 1.0:
             mask = ndimage.minimum_filter(bad, size=5)
             weight *= ndimage.map_coordinates(mask, where, order=0, output=np.float32, mode="nearest") if moved else mask
-    # Brightness of the two frames is matched where they are, slowly: lamps drift and beads bleach.
-    sr, ss = (ndimage.gaussian_filter(image, 1.5) ** 2 * weight for image in (pair.relaxed, carried))
-    slow = [ndimage.gaussian_filter(image, 40.0, mode="nearest") for image in (sr, ss)]
-    ratio = np.sqrt(np.maximum(slow[0], 1e-12) / np.maximum(slow[1], 1e-12)).astype(np.float32)
-    carried = carried * np.clip(ratio, 0.05, 20.0)
+    ratio = _brightness_ratio(pair.relaxed, carried, weight)
+    carried = carried * ratio
     residual = carried - pair.relaxed
-    level = ndimage.gaussian_filter(0.5 * (carried + pair.relaxed), 1.0)
+    level = _smooth(0.5 * (carried + pair.relaxed), 1.0)
     # Both frames carry the noise; the stressed one is stretched by the ratio (its photons are 1/ratio of the level).
     variance = noise.variance(level) * (1.0 + ratio)
-    gr, gs = _gradient(pair.relaxed), _gradient(carried)
-    hr, hs = (tuple(ndimage.gaussian_filter(g, smoothing) for g in pair_g) for pair_g in (gr, gs))
-    # A lost or a new bead leaves a residual that noise and a small misalignment cannot explain.
-    steep = np.sqrt(ndimage.gaussian_filter(hr[0] ** 2 + hr[1] ** 2 + hs[0] ** 2 + hs[1] ** 2, 1.5))
-    odd = np.abs(residual) > outlier_sigma * np.sqrt(variance) + 1.0 * steep
-    if odd.any():
-        weight = weight * (1.0 - ndimage.maximum_filter(odd.astype(np.float32), size=5))
+    gr, gs = pair.relaxed_gradient(0.0), _gradient(carried)
+    hr, hs = pair.relaxed_gradient(smoothing), (_smooth(gs[0], smoothing), _smooth(gs[1], smoothing))
+    if np.isfinite(outlier_sigma):
+        # A lost or a new bead leaves a residual that noise and a small misalignment cannot explain.
+        steep = np.sqrt(_smooth(hr[0] ** 2 + hr[1] ** 2 + hs[0] ** 2 + hs[1] ** 2, 1.5))
+        odd = np.abs(residual) > outlier_sigma * np.sqrt(variance) + steep
+        if odd.any():
+            weight = weight * (1.0 - ndimage.maximum_filter(odd.astype(np.float32), size=5))
     w = weight / variance
 
     def block(values: Float32) -> NDArray[np.float64]:
