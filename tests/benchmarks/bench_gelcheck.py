@@ -28,7 +28,8 @@ from tfm.traction import infer_image
 
 COLUMNS = (
     "seed", "entry", "poisson", "thickness", "entered", "best", "low", "high", "mean", "sd", "h_best", "h_low",
-    "h_high", "surprise_poisson", "surprise_thickness", "verdict", "misfit", "cells", "moment_error", "seconds", "seconds_check",
+    "h_high", "surprise_poisson", "surprise_thickness", "verdict", "misfit", "cells", "moment_error", "seconds",
+    "seconds_check",
 )  # fmt: skip
 #: A cell counts as strong when the beads measure its field's Poisson ratio this well (one standard deviation).
 STRONG = 0.04
@@ -113,7 +114,8 @@ def pooled(count: int, gel: Gel, first: int, writer: csv.DictWriter[str]) -> Non
         nu, h = together.poisson, together.thickness
         print(
             f"{len(found)} fields: nu {nu.best:.3f} ({nu.low:.3f} to {nu.high:.3f}; true {gel.poisson:g}),"
-            f" h {h.best * 1e6:.1f} ({h.low * 1e6:.1f} to {h.high * 1e6:.1f} um; true {(gel.thickness or np.inf) * 1e6:.1f})",
+            f" h {h.best * 1e6:.1f} ({h.low * 1e6:.1f} to {h.high * 1e6:.1f} um;"
+            f" true {(gel.thickness or np.inf) * 1e6:.1f})",
             flush=True,
         )
 

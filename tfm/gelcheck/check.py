@@ -136,7 +136,8 @@ def check_gel(
     # A misfit above 1 means noise, or a displacement that no gel explains, that the evidence knows nothing of.
     misfit = traction.misfit if math.isfinite(traction.misfit) else 1.0
     log_evidence = surface.log_evidence / max(1.0, misfit)
-    change = gel_sensitivity(problem, gel, surface.entered, surface.reference, shear=shear)
+    whole = problem if traction.method == "bounded" else reduce_problem(traction, merge=False)
+    change = gel_sensitivity(whole, gel, surface.entered, surface.reference, shear=shear)
     lower = change.poisson_lower
     found = _record(gel, surface.coordinate, surface.poisson, log_evidence, outliers, tuple(notes))
     return GelEvidence(

@@ -30,6 +30,8 @@ Array = NDArray[np.float64]
 CONTRADICTED = 0.997
 #: An interval of the Poisson ratio wider than this says nothing of use.
 WIDEST = 0.35
+#: m: a thicker gel differs from an infinitely thick one by less than anything measures (as the cube of length over h).
+THICK = 0.8e-3
 _LEAST_THICKNESS_SD = 0.10
 
 
@@ -128,7 +130,8 @@ def estimate_gel(coordinate: Array, poisson: Array, log_evidence: Array, gel: Ge
     nu, x = nu / nu.max(), x / x.max()
     of_nu = highest_density(poisson, nu, gel.poisson)
     of_x = highest_density(coordinate, x, coordinate_of(gel.thickness))
-    of_h = Interval(thickness_of(of_x.best), thickness_of(of_x.high), thickness_of(of_x.low), of_x.surprise)
+    best, least = (0.0 if v < coordinate_of(THICK) else v for v in (of_x.best, of_x.low))
+    of_h = Interval(thickness_of(best), thickness_of(of_x.high), thickness_of(least), of_x.surprise)
     mean = float(np.average(poisson, weights=nu))
     sd = float(np.sqrt(np.average((poisson - mean) ** 2, weights=nu)))
     return GelEstimate(of_nu, of_h, mean, sd, nu, x, verdict_of(of_nu, of_h))

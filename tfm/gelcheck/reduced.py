@@ -35,7 +35,7 @@ _OUTLIER = 12.0
 #: Logarithm of the factor by which amplitudes may follow a gel.
 _REACH = 0.4
 #: Edge of the patches that are merged, in lattice cells.
-_TILE = 4
+_TILE = 4.0
 #: Poisson ratios between which the response is interpolated: two are exact on a half-space.
 _NODES_HALF_SPACE = (0.0, 0.5)
 _NODES_LAYER = (0.0, 0.25, 0.5)
@@ -234,7 +234,9 @@ def _weigh(precision: Array, block: Array) -> Array:
     return np.concatenate([xx * block[:n] + xy * block[n:], xy * block[:n] + yy * block[n:]])
 
 
-def reduce_problem(traction: TractionField, *, most: int = MOST_COEFFICIENTS) -> ReducedProblem:
+def reduce_problem(
+    traction: TractionField, *, most: int = MOST_COEFFICIENTS, merge: bool | None = None
+) -> ReducedProblem:
     """What the comparison of gels needs of a traction field.
 
     Lengths, shapes and relative amplitudes of the prior are those that the traction's own evidence chose; a common
@@ -246,6 +248,8 @@ def reduce_problem(traction: TractionField, *, most: int = MOST_COEFFICIENTS) ->
         From the methods ``bounded`` or ``image``.
     most
         Largest number of coefficients kept.
+    merge
+        Whether neighbouring patches are merged; None = for the method ``image``, whose patches are small and many.
 
     Raises
     ------
@@ -254,8 +258,9 @@ def reduce_problem(traction: TractionField, *, most: int = MOST_COEFFICIENTS) ->
     """
     if traction.data is None or traction.solution is None:
         raise _no_posterior()
+    merge = traction.method == "image" if merge is None else merge
     step = max(choose_step(traction.labels, most=most), traction.data.basis.step)
-    data = replace(_merged(traction), basis=make_nodes(traction.labels, step=step))
+    data = replace(_merged(traction, _TILE if merge else 0.0), basis=make_nodes(traction.labels, step=step))
     strain = (1.0 + traction.gel.poisson) / traction.gel.youngs_modulus
     priors = tuple(
         _Prior(
@@ -274,13 +279,13 @@ def reduce_problem(traction: TractionField, *, most: int = MOST_COEFFICIENTS) ->
     return ReducedProblem(data, motions, weighted, balance, flat, priors, energy)
 
 
-def _merged(traction: TractionField) -> LinearData:
-    """The data in patches of twice the edge, without those that nothing explains.
+def _merged(traction: TractionField, tile: float) -> LinearData:
+    """The data in patches of ``tile`` lattice cells, without those that nothing explains.
 
     A small patch's sensitivity is a noisy number; where it was underestimated by chance, the patch asks for a
     displacement of many pixels. That hardly moves the traction, but a gel of short range could please such patches one
     by one, and the evidence would choose it. Corrections to the fitted displacement vary little over two patches, so
-    it is they that are averaged, at the patches' centre of information.
+    it is they that are averaged, at the patches' centre of information. With ``tile`` 0 nothing is merged.
     """
     data, solution = traction.data, traction.solution
     if data is None or solution is None:
@@ -296,14 +301,15 @@ def _merged(traction: TractionField) -> LinearData:
     left = data.value - fitted(data.rows, data.columns, nuisance_columns(data))
     xx, xy, yy = data.precision
     score = np.stack([xx * left[0] + xy * left[1], xy * left[0] + yy * left[1]])
-    tile = np.stack([np.floor((data.rows + 0.5) / _TILE), np.floor((data.columns + 0.5) / _TILE)])
-    _, member = np.unique(tile, axis=1, return_inverse=True)
-    member = np.asarray(member).reshape(-1)
+    member = np.arange(data.rows.size)
+    if tile > 0:
+        tiles = np.stack([np.floor((data.rows + 0.5) / tile), np.floor((data.columns + 0.5) / tile)])
+        member = np.asarray(np.unique(tiles, axis=1, return_inverse=True)[1]).reshape(-1)
     weight = np.maximum(xx + yy, 0.0) + 1e-12 * float(np.max(xx + yy))
     summed = (xx, xy, yy, *score, weight, weight * data.rows, weight * data.columns)
     pxx, pxy, pyy, sx, sy, w, r, c = (np.bincount(member, weights=v).astype(np.float64) for v in summed)
     # Half lattice cells: the kernel is interpolated for few distinct fractions.
-    rows, columns = np.rint(2.0 * r / w) / 2.0, np.rint(2.0 * c / w) / 2.0
+    rows, columns = (np.rint(2.0 * v / w) / 2.0 if tile > 0 else u for v, u in ((r, data.rows), (c, data.columns)))
     det, trace = pxx * pyy - pxy**2, pxx + pyy
     solid = (trace > 0) & (det > 1e-3 * trace**2)
     safe = np.where(solid, det, 1.0)

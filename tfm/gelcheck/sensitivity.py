@@ -62,34 +62,35 @@ def gel_sensitivity(
     Parameters
     ----------
     problem
-        Reduced data of the field.
+        Data of the field, nothing merged: a change of 1 % of the moment is worth every patch.
     gel
         As entered.
     entered
-        Family of the entered thickness.
+        Family of the entered thickness, for the curve of the energy; it may be of merged data.
     reference
-        Softness of the entered gel.
+        Its softness at the entered Poisson ratio.
     shear
         The shear modulus was entered: another Poisson ratio then changes Young's modulus too.
     """
-    old = _state(problem, entered, gel, reference)
+    home = gel_family(problem, gel.thickness, nodes=(gel.poisson,))
+    own = home.softness(gel.poisson)
+    old = _state(problem, home, gel, own)
 
-    def change(family: GelFamily, other: Gel) -> GelChange:
-        new = _state(problem, family, other, reference)
-        return GelChange(*(float(v) for v in new / old - 1.0))
+    def change(other: Gel) -> GelChange:
+        family = gel_family(problem, other.thickness, nodes=(other.poisson,))
+        return GelChange(*(float(v) for v in _state(problem, family, other, own) / old - 1.0))
 
     def with_poisson(poisson: float) -> Gel:
         factor = (1.0 + poisson) / (1.0 + gel.poisson) if shear else 1.0
         return replace(gel, poisson=poisson, youngs_modulus=gel.youngs_modulus * factor)
 
-    lower = change(entered, with_poisson(gel.poisson - 0.1)) if gel.poisson >= 0.1 else None
+    lower = change(with_poisson(gel.poisson - 0.1)) if gel.poisson >= 0.1 else None
     thicker = infinite = None
     if gel.thickness is not None:
-        more = replace(gel, thickness=1.1 * gel.thickness)
-        thicker = change(gel_family(problem, more.thickness, nodes=(gel.poisson,)), more)
-        half = replace(gel, thickness=None, thickness_sd=0.0)
-        infinite = change(gel_family(problem, None, nodes=(gel.poisson,)), half)
-    ratio = [_state(problem, entered, replace(gel, poisson=nu), reference)[0] / old[0] for nu in _CURVE]
+        thicker = change(replace(gel, thickness=1.1 * gel.thickness))
+        infinite = change(replace(gel, thickness=None, thickness_sd=0.0))
+    start = _state(entered.problem, entered, gel, reference)[0]
+    ratio = [_state(entered.problem, entered, replace(gel, poisson=nu), reference)[0] / start for nu in _CURVE]
     return Sensitivity(lower, GelChange(0.1, 0.1, 0.1), thicker, infinite, np.array(_CURVE), np.array(ratio))
 
 
