@@ -26,7 +26,7 @@ from tfm.report.words import alt_maps, cell_sentence, plain
 __all__ = ["DRAWING_VERSION", "Picture", "Pictures", "draw_field", "strongest_frame"]
 
 #: Raise when figures change, so that pictures of earlier versions are drawn anew.
-DRAWING_VERSION = 6
+DRAWING_VERSION = 7
 
 
 @dataclass(frozen=True)
@@ -87,8 +87,8 @@ _CAPTIONS = {
         "What moved, what pulled, where the moment is made",
         "Arrows are measured vectors (not every one), coloured by size and drawn to the scale of the bar in the lower "
         "left corner; dots are vectors below twice their noise. In the right map purple pulls towards the cell's "
-        "centroid and orange pushes away. Bars with arrow heads are the principal axes: heads point inwards along an "
-        "axis that contracts, and the shaded tips are 95 % regions of angle and size.",
+        "centroid; orange, ringed by dots, pushes away. Bars with arrow heads are the principal axes: heads point "
+        "inwards along an axis that contracts, and the shaded tips are 95 % regions of angle and size.",
     ),
     "frames": (
         "The series at a glance",
@@ -110,7 +110,7 @@ _CAPTIONS = {
     "numbers": (
         "Numbers behind the picture",
         "As far as this field has them: moment over time with its 95 % band, interaction energies of pairs, the error "
-        "budget, and what the beads say about the Poisson ratio.",
+        "budget, and what the beads say about Poisson ratio and thickness.",
     ),
 }
 

@@ -82,7 +82,12 @@ def _measurement(field: FieldResult, frame: int) -> list[tuple[str, str]]:
     found = [(words, f"{plain(number(row, key))} {unit}".strip()) for words, key, unit in _FRAME]
     record = field.record
     for name, value in (record.get("quality") or {}).items():
-        found.append((str(name).replace("_", " "), plain(value) if isinstance(value, int | float) else str(value)))
+        found.append(
+            (
+                str(name).removesuffix("_um").replace("_", " ") + (", µm" if str(name).endswith("_um") else ""),
+                plain(value) if isinstance(value, int | float) else str(value),
+            )
+        )
     seconds = record.get("seconds")
     if isinstance(seconds, Mapping) and isinstance(seconds.get("all"), int | float):
         found.append(("time taken", f"{seconds['all']:.1f} s"))

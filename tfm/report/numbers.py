@@ -121,7 +121,7 @@ def draw_evidence(
     entered, best, low, high = (number(gel, c) for c in columns)
     if curve is not None:
         height = np.asarray(curve[1], float) - np.max(curve[1])
-        ax.plot(curve[0], height, color=LINE, marker="o", ms=3, lw=1.3)
+        ax.plot(curve[0], height, color=LINE, marker="o" if len(height) <= 25 else "", ms=3, lw=1.5)
         ax.set_ylim(max(float(height.min()), -30.0) * 1.1, 2.0)
         ax.set_ylabel("log-evidence − best")
     else:

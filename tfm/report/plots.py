@@ -228,7 +228,8 @@ def draw_contraction(ax: Axes, x: ArrayLike, y: ArrayLike, traction: ArrayLike, 
     """Where the contractile moment is made: -(x - c) . T in nN/um, whose integral over a cell is its moment.
 
     Positive (purple) pulls towards the cell's centroid c, negative (orange) pushes away; zero lies in the middle of
-    the map. (For a cell in balance the integral does not depend on c; the map does.)
+    the map, and ground that pushes is ringed by a dotted line. (For a cell in balance the integral does not depend on
+    c; the map does.)
     """
     xs, ys, field, number = np.asarray(x, float), np.asarray(y, float), np.asarray(traction, float), np.asarray(labels)
     density = np.full(number.shape, np.nan)
@@ -245,5 +246,10 @@ def draw_contraction(ax: Axes, x: ArrayLike, y: ArrayLike, traction: ArrayLike, 
         extent=extent_of(xs, ys),
         zorder=1,
     )
+    # In grey both ends of the map are dark: what pushes is ringed, so that the sign does not hang on the hue.
+    pushes = np.nan_to_num(density)
+    if (pushes < -0.12 * top).any():
+        gx, gy = np.meshgrid(xs * UM, ys * UM)
+        ax.contour(gx, gy, pushes, levels=[-0.12 * top], colors=[INK], linestyles="dotted", linewidths=0.9, zorder=3)
     draw_outlines(ax, xs, ys, number)
     return shown
