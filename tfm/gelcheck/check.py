@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.interpolate import CubicSpline
 
 from tfm.errors import ConvergenceError, InputError
 from tfm.gel import Gel, full_strain, surface_strain
@@ -20,7 +21,7 @@ from tfm.gelcheck.surface import measure_surface
 from tfm.moments import CellDipole
 from tfm.traction.model import TractionField
 
-__all__ = ["GelEvidence", "check_gel", "pool_gel", "strain_peak"]
+__all__ = ["FreePoisson", "GelEvidence", "check_gel", "free_poisson", "pool_gel", "strain_peak"]
 
 Array = NDArray[np.float64]
 
@@ -175,6 +176,47 @@ def pool_gel(evidences: Sequence[GelEvidence]) -> GelEvidence:
         raise InputError("no field has evidence", code="nothing-to-pool", remedy="use the method bounded or image")
     found = _record(first.gel, first.coordinate, first.poisson, total, outliers, ())
     return GelEvidence(**{**found, "fields": len(used)})
+
+
+@dataclass(frozen=True)
+class FreePoisson:
+    """What leaving the Poisson ratio to the beads does to a field's contractile moment and strain energy.
+
+    Multiply the reported value by the factor; ``_sd`` is one standard deviation of the factor, to be added in quadrature
+    to the relative error from the images. Young's modulus is held.
+    """
+
+    moment_factor: float
+    moment_factor_sd: float
+    energy_factor: float
+    energy_factor_sd: float
+
+
+def free_poisson(evidence: GelEvidence) -> FreePoisson:
+    """Moment and energy with the Poisson ratio averaged over its evidence instead of entered.
+
+    The mean and standard deviation of value(nu) / value(entered nu) over the marginal density of nu (law of total
+    variance); the value between the six Poisson ratios that were solved is a cubic spline.
+
+    Parameters
+    ----------
+    evidence
+        Of one field, from a method with a posterior.
+
+    Raises
+    ------
+    InputError
+        When the evidence has no densities or no sensitivity (method ``fourier``, pooled fields).
+    """
+    change, estimate, poisson = evidence.sensitivity, evidence.estimate, evidence.poisson
+    if change is None or estimate is None or poisson is None:
+        raise InputError("no evidence of one field", code="no-posterior", remedy="use the method bounded or image")
+    found = []
+    for ratio in (change.moment_ratio, change.energy_ratio):
+        value = CubicSpline(change.poisson, ratio)(poisson)
+        mean = float(np.average(value, weights=estimate.poisson_density))
+        found += [mean, float(np.sqrt(np.average((value - mean) ** 2, weights=estimate.poisson_density)))]
+    return FreePoisson(*found)
 
 
 def strain_peak(traction: TractionField) -> float:

@@ -42,8 +42,9 @@ class Sensitivity:
         Thickness entered higher by 10 %.
     infinite
         Thickness left away.
-    poisson, energy_ratio
-        ``(6,)`` Poisson ratios and the strain energy there over that of the entered gel, at the same Young's modulus.
+    poisson, energy_ratio, moment_ratio
+        ``(6,)`` Poisson ratios, and strain energy and contractile moment there over those of the entered gel, at the same
+        Young's modulus.
     """
 
     poisson_lower: GelChange | None
@@ -52,6 +53,7 @@ class Sensitivity:
     infinite: GelChange | None
     poisson: Array
     energy_ratio: Array
+    moment_ratio: Array
 
 
 def gel_sensitivity(
@@ -89,9 +91,10 @@ def gel_sensitivity(
     if gel.thickness is not None:
         thicker = change(replace(gel, thickness=1.1 * gel.thickness))
         infinite = change(replace(gel, thickness=None, thickness_sd=0.0))
-    start = _state(entered.problem, entered, gel, reference)[0]
-    ratio = [_state(entered.problem, entered, replace(gel, poisson=nu), reference)[0] / start for nu in _CURVE]
-    return Sensitivity(lower, GelChange(0.1, 0.1, 0.1), thicker, infinite, np.array(_CURVE), np.array(ratio))
+    start = _state(entered.problem, entered, gel, reference)
+    curve = [_state(entered.problem, entered, replace(gel, poisson=nu), reference) / start for nu in _CURVE]
+    ratio = np.stack(curve)
+    return Sensitivity(lower, GelChange(0.1, 0.1, 0.1), thicker, infinite, np.array(_CURVE), ratio[:, 0], ratio[:, 1])
 
 
 def _state(problem: ReducedProblem, family: GelFamily, gel: Gel, reference: float) -> Array:

@@ -29,7 +29,7 @@ THINNEST = 5e-6
 POISSON_GRID = np.linspace(0.0, 0.5, 201)
 _FIRST_POISSON = (0.0, 0.15, 0.3, 0.4, 0.5)
 _LADDER = (np.inf, 80e-6, 40e-6, 20e-6, 10e-6)
-_MOST_FAMILIES = 10
+_MOST_FAMILIES = 9
 #: Differences of log evidence above which a gel is out of the running and its curve need not be fine.
 _HOPELESS = 30.0
 
