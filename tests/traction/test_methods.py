@@ -188,11 +188,11 @@ def test_brightness_and_lost_beads_do_not_matter(bead_field, image_result):
 
 
 def test_an_outline_drawn_too_small_is_noticed(bead_field, image_result):
-    """The same beads with an outline shrunk by 4 um: the ring outside it is not explained, and the note says so."""
+    """The same beads with an outline shrunk by 2 um: the ring outside it is not explained, and the note says so."""
     frames, start, outlines, result = image_result
     f = bead_field
     depth = ndimage.distance_transform_edt(f.labels > 0) * f.pixel_size
-    small = Outlines(np.where(depth > 4e-6, f.labels, 0).astype(np.int32), "label image")
+    small = Outlines(np.where(depth > 2e-6, f.labels, 0).astype(np.int32), "label image")
     shrunk = infer_image(*frames, f.pixel_size, small, f.gel, start=start)
     assert any("just outside the outline" in note for note in shrunk.notes)
     assert not any("just outside the outline" in note for note in result.notes)

@@ -128,6 +128,7 @@ def _linearise(
     # One number turns score and sensitivity into score and information of a likelihood: variance = sensitivity.
     efficiency = float((j[0] + j[2])[kept].sum() / (v[0] + v[2])[kept].sum()) / scale
     weight = efficiency * kept
+    j = _positive_part(j)
     now = (loop.response @ mean + loop.motions @ motion).reshape(2, -1)
     weighted = s * weight / loop.pixel
     jdet = j[0] * j[2] - j[1] ** 2
@@ -148,6 +149,21 @@ def _linearise(
     ring_bound = 1.0 + max(0.5, 5.0 / np.sqrt(max(int(ring.sum()), 1)))
     data = replace(loop.data, value=now + shift * loop.pixel, precision=precision, weighted=weighted)
     return _Step(data, terms, scale, efficiency, misfit, ring_misfit, ring_bound, int(filled.sum() - kept.sum()))
+
+
+def _positive_part(j: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Symmetric 2 x 2 matrices ``(3, N)`` with negative eigenvalues set to 0.
+
+    Where the frames do not match (a block far from its place, no bead) the product of the two gradients scatters around zero.
+    The score already says so; a negative information would let the traction run away.
+    """
+    mean, half = 0.5 * (j[0] + j[2]), np.hypot(0.5 * (j[0] - j[2]), j[1])
+    high, low = np.maximum(mean + half, 0.0), np.maximum(mean - half, 0.0)
+    safe = np.where(half > 0, half, 1.0)
+    c = np.where(half > 0, 0.5 * (j[0] - j[2]) / safe, 1.0)
+    k = np.where(half > 0, j[1] / safe, 0.0)
+    middle, split = 0.5 * (high + low), 0.5 * (high - low)
+    return np.stack([middle + split * c, split * k, middle - split * c])
 
 
 def _dipole_rows(data: LinearData) -> NDArray[np.float64]:
@@ -279,7 +295,14 @@ def _begin(loop: _Loop, begin: LinearData, previous: TractionField | None) -> _S
         if previous.solution.mean.size == size and np.array_equal(previous.labels, loop.covered):
             still = replace(previous.solution, nuisance=np.zeros_like(previous.solution.nuisance))
             return _State(still, NoiseModel(0.0, 1.0), 1.3, None, (), False)
-    solution, _ = solve(begin, loop.gel, priors=loop.priors, tolerance=0.3, search=False)
+    solution, normal = solve(begin, loop.gel, priors=loop.priors, tolerance=0.3, search=False)
+    # Vectors 16 px apart leave room for any displacement between them: a start must not shift beads further than was seen.
+    seen = np.hypot(*(begin.value - np.median(begin.value, axis=1, keepdims=True))).max()
+    for _ in range(12):
+        u = displacement(loop.gel, lattice_traction(loop.data, solution.mean), loop.lattice.spacing, kernel=loop.kernel)
+        if np.hypot(*u).max() < 1.5 * seen + 1.0 * loop.pixel:
+            break
+        solution = fixed_posterior(begin, normal, solution.components, amplitude_factor=0.5, priors=loop.priors)
     return _State(solution, NoiseModel(0.0, 1.0), 1.3, None, (), False)
 
 

@@ -147,7 +147,9 @@ def bead_width(pair: FramePair, carried: Float32, weight: Float32) -> float:
     gr, gs = _gradient(pair.relaxed), _gradient(carried)
     power = float(np.sum(weight * pair.relaxed * carried, dtype=np.float64))
     steepness = float(np.sum(weight * (gr[0] * gs[0] + gr[1] * gs[1]), dtype=np.float64))
-    return float(np.sqrt(np.clip(power / max(steepness, 1e-12 * abs(power)), 0.3, 16.0)))
+    if not (power > 0 and steepness > 0):  # frames that do not match at all: a usual width, the misfit tells
+        return 1.3
+    return float(np.sqrt(np.clip(power / steepness, 0.3, 16.0)))
 
 
 def rigid_beads(u: NDArray[np.float64], spread: float) -> NDArray[np.float64]:
