@@ -160,7 +160,7 @@ def _gel_findings(field: FieldResult) -> list[Finding]:
     weight = 3.0 if gel["verdict"] == "contradicted" else 0.8
     reason = gel.get("notes") or f"the gel as entered is {gel['verdict']} by the beads"
     if entered is not None and low is not None and high is not None and not low <= entered <= high:
-        return [Finding(field, "Poisson ratio", f"{entered:g}", f"{low:.2f} to {high:.2f}", reason, weight)]
+        return [Finding(field, "Poisson ratio", f"{entered:g}", f"{low:.3g} to {high:.3g}", reason, weight)]
     return [Finding(field, "gel", gel["verdict"], "agrees", reason, weight)]
 
 
