@@ -65,7 +65,8 @@ def choose_windows(patches: list[Patches], *, most_misfit: float = 3.0) -> Chose
     patches
         One per window, in the order of :data:`WINDOWS`.
     most_misfit
-        Nodes whose mean squared residual exceeds its expectation by more than this factor are not valid.
+        Nodes whose mean squared residual exceeds its expectation, or the image's median where that is higher, by
+        more than this factor are not valid.
     """
     wide, second, sharp = patches[0], patches[1], patches[-1]
     d = np.maximum(_difference(wide, second), 0.0)
@@ -95,7 +96,8 @@ def choose_windows(patches: list[Patches], *, most_misfit: float = 3.0) -> Chose
         # A vector carries the information of the ground that it is worth: less where its error was widened.
         own = patch.area * _trace(patch) / (widened[0] + widened[2])
         area, misfit = np.where(better, own, area), np.where(better, patch.misfit, misfit)
-    valid = np.isfinite(best) & (misfit < most_misfit)
+    # Against the image's own level: with very bright beads the optics, not photons, set the misfit everywhere.
+    valid = np.isfinite(best) & (misfit < most_misfit * max(1.0, level))
     return Chosen(
         u=np.where(valid, u, np.nan),
         covariance=np.where(valid, covariance, np.nan),

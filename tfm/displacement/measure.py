@@ -87,13 +87,21 @@ def measure_displacement(
     a, b = _checked(relaxed, stressed, pixel_size, quiet, saturation)
     drift = estimate_drift(a.image, b.image, quiet=quiet, usable=a.usable & b.usable)
     spacing = spacing_px or (16 if mode == "start" else 8)
-    start = piv_start(a.image, b.image, shift=drift.shift, spacing_px=spacing if mode == "start" else 16)
+    start = _start(a, b, drift, spacing if mode == "start" else 16)
     if mode == "start":
         return _from_start(start, (a, b), pixel_size, quiet, rotation, magnification)
     beads = bead_count(a)[0] / max(1, int(a.usable.sum()))
     radius = float(np.clip(0.6 * np.sqrt(_BEADS_PER_WINDOW / max(beads, 1e-9)), 12.0, 40.0))
     refined = refine_displacement(a, b, start, spacing_px=spacing, radius=radius, quiet=quiet)
     return _from_refined(refined, start, (a, b), pixel_size, quiet, rotation, magnification)
+
+
+def _start(a: PreparedFrame, b: PreparedFrame, drift: RigidMotion, spacing: int) -> PivField:
+    """Start from the drift, or from no shift where strain is so large that the whole frames share none."""
+    try:
+        return piv_start(a.image, b.image, shift=drift.shift, spacing_px=spacing, usable=a.usable)
+    except MeasurementError:
+        return piv_start(a.image, b.image, spacing_px=spacing, usable=a.usable)
 
 
 def _checked(

@@ -6,6 +6,7 @@ import itertools
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.optimize import nnls
 
 __all__ = ["camera_noise", "vector_noise"]
 
@@ -83,10 +84,9 @@ def camera_noise(
     fitted = v.copy()
     for _ in range(5):
         # A variance from n pixels is known to a share of about sqrt(2.7 / n) of itself.
-        root = np.sqrt(n) / np.maximum(fitted, 0.05 * float(np.median(v)) + 1e-30)
-        design = np.stack([np.ones_like(x), x], axis=1)
-        c0, c1 = np.linalg.lstsq(design * root[:, None], v * root, rcond=None)[0]
-        fitted = c0 + c1 * x
-    if c1 < 0:
-        return float(np.average(v, weights=n)), 0.0
-    return float(c0), float(c1)
+        root = np.sqrt(n) / np.maximum(fitted, 0.3 * float(v.min()) + 1e-30)
+        # Variance at the darkest bin and slope, neither below 0: a negative variance would be an infinite weight.
+        design = np.stack([np.ones_like(x), x - x.min()], axis=1)
+        (dark, slope), _ = nnls(design * root[:, None], v * root)
+        fitted = dark + slope * (x - x.min())
+    return float(dark - slope * x.min()), float(slope)

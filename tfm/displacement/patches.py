@@ -177,7 +177,7 @@ class PatchSums:
         cov = first @ spread @ np.swapaxes(first, 1, 2) if self.with_covariance else first[:, :, :2]
         trace, det = cov[:, 0, 0] + cov[:, 1, 1], cov[:, 0, 0] * cov[:, 1, 1] - cov[:, 0, 1] ** 2
         worst = 0.5 * trace + np.sqrt(np.maximum(0.25 * trace**2 - det, 0))
-        ok &= (det > 0) & (worst < 1 / least_information)
+        ok &= (det > 0) & (trace > 0) & (worst < 1 / least_information)
         valid = ok.reshape(shape)
         covariance = np.stack([cov[:, 0, 0], cov[:, 0, 1], cov[:, 1, 1]]).reshape(3, *shape)
         misfit = np.full(shape, np.nan)

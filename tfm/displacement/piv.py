@@ -27,6 +27,8 @@ __all__ = ["PivField", "local_median_outliers", "piv_start"]
 
 _WINDOW = 32
 _CHUNK = 1000
+#: px; neighbours 16 px apart on a gel agree to a pixel or two at any strain, windows that match by chance to ten.
+_MOST_DISORDER = 4.0
 
 
 @dataclass(frozen=True)
@@ -117,7 +119,7 @@ def piv_start(
                 break
             if repeat == 0 and before is not None and moved < 0.1 * factor:
                 break
-    if field is None or not field.valid.any():
+    if field is None or not field.valid.any() or _disorder(field) > _MOST_DISORDER:
         raise MeasurementError(
             "no part of the two bead images matches",
             code="no-match",
@@ -268,6 +270,27 @@ def _openpiv_peaks(
     return np.asarray(found[0], float), np.asarray(found[1], float), height
 
 
+def _disorder(field: PivField) -> float:
+    """Median distance (px) of a vector from the median of its neighbours; 0 when none has neighbours."""
+    distance = np.sqrt(((field.u - _neighbours(field.u, field.valid)[0]) ** 2).sum(axis=0))
+    known = distance[np.isfinite(distance)]
+    return float(np.median(known)) if known.size else 0.0
+
+
+def _neighbours(
+    u: NDArray[np.float64], valid: NDArray[np.bool_]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.int_]]:
+    """Median of the up to eight valid neighbours, their median deviation from it, and how many there are."""
+    masked = np.where(valid, u, np.nan)
+    padded = np.pad(masked, ((0, 0), (1, 1), (1, 1)), constant_values=np.nan)
+    around = np.delete(sliding_window_view(padded, (3, 3), axis=(1, 2)).reshape(*u.shape, 9), 4, axis=-1)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)  # all-NaN neighbourhoods answer NaN, which is what is wanted
+        middle = np.nanmedian(around, axis=-1)
+        scatter = np.nanmedian(np.abs(around - middle[..., None]), axis=-1)
+    return middle, scatter, np.isfinite(around[0]).sum(axis=-1)
+
+
 def local_median_outliers(
     u: NDArray[np.float64], valid: NDArray[np.bool_], *, threshold: float = 3.0, floor: float = 0.1
 ) -> NDArray[np.bool_]:
@@ -282,17 +305,9 @@ def local_median_outliers(
     >>> np.argwhere(local_median_outliers(u, np.ones((5, 5), bool))).tolist()
     [[2, 2]]
     """
-    masked = np.where(valid, u, np.nan)
-    padded = np.pad(masked, ((0, 0), (1, 1), (1, 1)), constant_values=np.nan)
-    around = sliding_window_view(padded, (3, 3), axis=(1, 2)).reshape(*u.shape, 9)
-    around = np.delete(around, 4, axis=-1)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)  # all-NaN neighbourhoods answer NaN, which is what is wanted
-        middle = np.nanmedian(around, axis=-1)
-        scatter = np.nanmedian(np.abs(around - middle[..., None]), axis=-1)
-    ratio = np.sqrt((((masked - middle) / (scatter + floor)) ** 2).sum(axis=0))
-    enough = np.isfinite(around[0]).sum(axis=-1) >= 3
-    return np.asarray(valid & enough & (ratio > threshold))
+    middle, scatter, count = _neighbours(u, valid)
+    ratio = np.sqrt((((np.where(valid, u, np.nan) - middle) / (scatter + floor)) ** 2).sum(axis=0))
+    return np.asarray(valid & (count >= 3) & (ratio > threshold))
 
 
 def _rms_change(before: PivField | None, now: PivField) -> float:

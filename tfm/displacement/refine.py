@@ -23,8 +23,11 @@ __all__ = ["RefinedField", "refine_displacement"]
 
 #: Residual, in standard deviations over a bead, beyond which a bead counts as lost or added.
 _REJECT = 6.0
-#: px; when 99 % of the nodes move less than this, one more step is the last.
+#: px; when 98 % of the nodes move less than this, one more step is the last.
 _SETTLED = 0.25
+_LONGEST_STEP = 1.0
+#: px; a node that wants to go further has lost its beads, and no number of steps brings it back.
+_ASTRAY = 5.0
 
 
 @dataclass(frozen=True)
@@ -112,16 +115,25 @@ def refine_displacement(
     variance = (float((1.4826 * np.median(np.abs(dark - np.median(dark)))) ** 2) + 1e-12, 0.0)
     ones, zeros = np.ones(shape, dtype=np.float32), np.zeros(shape, dtype=np.float32)
     level = brightness_ratio(relaxed, stressed)
-    pair = FramePair(relaxed.image, spline_filter(stressed.image, 3, output=np.float32), relaxed.background,
-                     stressed.background, relaxed.usable, stressed.usable, relaxed.linear, level * ones, zeros, variance,
-                     0.5 * variance[0],
-                     _shared_width(relaxed, stressed))  # fmt: skip
+    pair = FramePair(
+        relaxed=relaxed.image,
+        stressed=spline_filter(stressed.image, 3, output=np.float32),
+        floor_relaxed=relaxed.background,
+        floor_stressed=stressed.background,
+        usable_relaxed=relaxed.usable,
+        usable_stressed=stressed.usable,
+        linear=relaxed.linear,
+        gain=level * ones,
+        offset=zeros,
+        variance=variance,
+        least_variance=0.5 * variance[0],
+        bead_width=_shared_width(relaxed, stressed),
+    )
     moves: list[float] = []
     for _ in range(most_iterations):
         sweep = _sweep(pair, nodes, [(coarse_x, coarse_y, 1.25 * radius, 2)], np.inf, quiet, with_covariance=False)
-        new = _Nodes(coarse_x, coarse_y, fill_smoothly(sweep.patches[0].u, sweep.patches[0].valid))
-        moves.append(_largest_move(nodes, new))
-        nodes = new
+        nodes, move = _step(nodes, sweep.patches[0], coarse_x, coarse_y)
+        moves.append(move)
         pair = replace(
             pair, variance=sweep.variance, least_variance=sweep.least_variance, gain=sweep.gain, offset=sweep.offset
         )
@@ -130,7 +142,7 @@ def refine_displacement(
             break
     windows = [(x, y, factor * radius, order) for order, factor in WINDOWS]
     last = _sweep(pair, nodes, windows, _REJECT, quiet, with_covariance=True)
-    chosen = choose_windows(last.patches)
+    chosen = choose_windows([_within_reach(patches, nodes, x, y) for patches in last.patches])
     settings = {
         "refinement": "patches with local deformation",
         "window_radius_px": [factor * radius for _, factor in WINDOWS],
@@ -193,6 +205,31 @@ def _sweep(
                   lost / max(1, used + lost))  # fmt: skip
 
 
-def _largest_move(before: _Nodes, now: _Nodes) -> float:
-    old = to_pixels(before.u, spline_matrix(before.y, now.y), spline_matrix(before.x, now.x))
-    return float(np.quantile(np.hypot(*(now.u - old)), 0.99))
+def _step(
+    before: _Nodes, found: Patches, x: NDArray[np.float64], y: NDArray[np.float64]
+) -> tuple[_Nodes, float]:
+    """The next field, and the distance that 98 % of its nodes stay below.
+
+    A node moves at most one pixel, about a bead's width, beyond which a linear step means nothing; a node without an
+    answer stays where it was.
+    """
+    old = to_pixels(before.u, spline_matrix(before.y, y), spline_matrix(before.x, x)).astype(np.float64)
+    step = np.where(found.valid, found.u - old, 0.0)
+    size = np.hypot(*step)
+    step *= np.minimum(1.0, _LONGEST_STEP / np.maximum(size, 1e-12))
+    settled = size[found.valid & (size < _ASTRAY)]
+    return _Nodes(x, y, old + step), float(np.quantile(settled, 0.98)) if settled.size else 0.0
+
+
+def _within_reach(
+    patches: Patches, nodes: _Nodes, x: NDArray[np.float64], y: NDArray[np.float64]
+) -> Patches:
+    """Patches whose last step was longer than a linear step can be are not valid: they have not converged."""
+    old = to_pixels(nodes.u, spline_matrix(nodes.y, y), spline_matrix(nodes.x, x))
+    valid = patches.valid & (np.hypot(*np.nan_to_num(patches.u - old, nan=np.inf)) < _LONGEST_STEP)
+    return replace(
+        patches,
+        u=np.where(valid, patches.u, np.nan),
+        covariance=np.where(valid, patches.covariance, np.nan),
+        valid=valid,
+    )
