@@ -10,6 +10,7 @@ import pytest
 
 from tfm.displacement.model import DisplacementField
 from tfm.gel import Gel
+from tfm.gelcheck import GelEvidence, check_gel
 from tfm.images.model import Outlines
 from tfm.moments import CellDipole, cell_dipoles
 from tfm.synth import make_cell_traction
@@ -34,7 +35,7 @@ class Case:
         return traction, cell_dipoles(traction, self.outlines, PIXEL)
 
 
-def make_case(gel: Gel, *, seed: int = 1, noise: float = 0.015e-6, moment: float | None = None) -> Case:
+def make_case(gel: Gel, *, seed: int = 2, noise: float = 0.015e-6, moment: float | None = None) -> Case:
     """One elongated cell in the middle of a 70 um field; ``noise`` is one standard deviation of a vector, m."""
     rng = np.random.default_rng(seed)
     pull = 0.8e-12 * gel.youngs_modulus / 6e3 if moment is None else moment
@@ -63,10 +64,24 @@ def case() -> Callable[..., Case]:
     """Makes cases, each once."""
     known: dict[tuple[object, ...], Case] = {}
 
-    def make(gel: Gel, seed: int = 1, noise: float = 0.015e-6) -> Case:
+    def make(gel: Gel, seed: int = 2, noise: float = 0.015e-6) -> Case:
         key = (gel, seed, noise)
         if key not in known:
             known[key] = make_case(gel, seed=seed, noise=noise)
         return known[key]
 
     return make
+
+
+@pytest.fixture(scope="session")
+def checked(case) -> Callable[..., GelEvidence]:
+    """The check of an entered gel on a case, each done once."""
+    known: dict[tuple[object, ...], GelEvidence] = {}
+
+    def check(gel: Gel, entered: Gel, seed: int = 2, noise: float = 0.015e-6) -> GelEvidence:
+        key = (gel, entered, seed, noise)
+        if key not in known:
+            known[key] = check_gel(*case(gel, seed, noise).infer(entered))
+        return known[key]
+
+    return check

@@ -16,8 +16,8 @@ GEL = Gel(6e3, 0.45, 30e-6)
 CELL = CellDipole(
     cell=1, centroid=np.zeros(2), area=900e-12, outline_axis=0.0, dipole=np.array([-0.7e-12, 0.0, -0.3e-12]),
     covariance=None, total_covariance=None, major=-0.7e-12, minor=-0.3e-12, axis=0.0, axis_sd=None, anisotropy=0.4,
-    contractile_moment=1e-12, contractile_moment_sd=0.02e-12, contractile_moment_total_sd=None, net_force=0.0, torque=0.0,
-    force_total=60e-9, strain_energy=4e-15, strain_energy_sd=None, traction_peak=300.0, traction_rms=80.0,
+    contractile_moment=1e-12, contractile_moment_sd=0.02e-12, contractile_moment_total_sd=None, net_force=0.0,
+    torque=0.0, force_total=60e-9, strain_energy=4e-15, strain_energy_sd=None, traction_peak=300.0, traction_rms=80.0,
     displacement_peak=0.8e-6, budget={},
 )  # fmt: skip
 

@@ -182,8 +182,8 @@ def pool_gel(evidences: Sequence[GelEvidence]) -> GelEvidence:
 class FreePoisson:
     """What leaving the Poisson ratio to the beads does to a field's contractile moment and strain energy.
 
-    Multiply the reported value by the factor; ``_sd`` is one standard deviation of the factor, to be added in quadrature
-    to the relative error from the images. Young's modulus is held.
+    Multiply the reported value by the factor; ``_sd`` is one standard deviation of the factor, to be added in
+    quadrature to the relative error from the images. Young's modulus is held.
     """
 
     moment_factor: float

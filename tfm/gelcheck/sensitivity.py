@@ -43,8 +43,8 @@ class Sensitivity:
     infinite
         Thickness left away.
     poisson, energy_ratio, moment_ratio
-        ``(6,)`` Poisson ratios, and strain energy and contractile moment there over those of the entered gel, at the same
-        Young's modulus.
+        ``(6,)`` Poisson ratios, and strain energy and contractile moment there over those of the entered gel, at the
+        same Young's modulus.
     """
 
     poisson_lower: GelChange | None
