@@ -21,7 +21,9 @@ def two_cells(gel, shift=(0, 46), tensors=((-3e7, 1e7, -1e7), (-1e7, -6e6, -2e7)
     rows, columns = np.indices((n, n)).astype(float)
     labels = np.zeros((n, n), np.int32)
     traction = np.zeros((2, n, n))
-    for number, (start, s) in enumerate(zip(((50.0, 36.0), (50.0 + shift[0], 36.0 + shift[1])), tensors, strict=True), 1):
+    for number, (start, s) in enumerate(
+        zip(((50.0, 36.0), (50.0 + shift[0], 36.0 + shift[1])), tensors, strict=True), 1
+    ):
         dx, dy = (columns - start[1]) * SPACING, (rows - start[0]) * SPACING
         r = np.hypot(dx, dy) / SPACING
         c, k = (np.cos(turn), np.sin(turn)) if number == 2 else (1.0, 0.0)
@@ -31,7 +33,17 @@ def two_cells(gel, shift=(0, 46), tensors=((-3e7, 1e7, -1e7), (-1e7, -6e6, -2e7)
         labels[r < radius] = number
     axis = np.arange(n) * SPACING
     field = TractionField(
-        axis, axis, SPACING, traction, displacement(gel, traction, SPACING), labels, gel, "bounded", None, np.zeros(2), 1.0
+        axis,
+        axis,
+        SPACING,
+        traction,
+        displacement(gel, traction, SPACING),
+        labels,
+        gel,
+        "bounded",
+        None,
+        np.zeros(2),
+        1.0,
     )
     outlines = Outlines(labels, "label image")
     return field, cell_dipoles(field, outlines, SPACING)
@@ -104,7 +116,9 @@ def test_pair_energy_error_covers_draws_of_the_posterior():
     result = infer_bounded(cell.field, cell.pixel, outlines, gel, most_coefficients=300)
     (pair,) = cell_pairs(result, cell_dipoles(result, outlines, cell.pixel), noise_energy=1e-15)
     e = energy_matrix(result.data, result)
-    draws = np.random.default_rng(0).multivariate_normal(result.posterior.mean, result.posterior.covariance, 4000, method="eigh")
+    draws = np.random.default_rng(0).multivariate_normal(
+        result.posterior.mean, result.posterior.covariance, 4000, method="eigh"
+    )
     first = np.tile(result.data.basis.node_labels == 1, 2)
     energies = np.einsum("ki,ij,kj->k", draws[:, first], e[np.ix_(first, ~first)], draws[:, ~first])
     assert pair.energy == pytest.approx(energies.mean(), abs=4 * energies.std() / np.sqrt(4000))
@@ -116,7 +130,8 @@ def test_pair_energy_error_covers_draws_of_the_posterior():
 
 
 def test_total_error_adds_the_gel():
-    """The moment is proportional to E (linear elasticity), so 10 % of E is 10 % of the moment, added in squares; a stated error of
+    """The moment is proportional to E (linear elasticity), so 10 % of E is 10 % of the moment, added in squares; a
+    stated error of
     nu and h moves it by what solving again on another gel gives."""
     from tfm.traction import infer_bounded
 
@@ -125,14 +140,21 @@ def test_total_error_adds_the_gel():
     outlines = cell.outlines
 
     def moment(g):
-        return cell_dipoles(infer_bounded(cell.field, cell.pixel, outlines, g, most_coefficients=300), outlines, cell.pixel)[0]
+        return cell_dipoles(
+            infer_bounded(cell.field, cell.pixel, outlines, g, most_coefficients=300), outlines, cell.pixel
+        )[0]
 
     found = moment(gel)
     extra = found.contractile_moment_total_sd**2 - found.contractile_moment_sd**2
     assert np.sqrt(extra) == pytest.approx(0.1 * found.contractile_moment, rel=1e-6)
     assert found.budget["youngs_modulus"] == pytest.approx(extra, rel=1e-6)
     loose = moment(replace(gel, youngs_modulus_sd=0.0, poisson_sd=0.03, thickness_sd=2e-6))
-    slope_nu = (moment(replace(gel, poisson=0.48)).contractile_moment - moment(replace(gel, poisson=0.42)).contractile_moment) / 0.06
-    slope_h = (moment(replace(gel, thickness=21e-6)).contractile_moment - moment(replace(gel, thickness=19e-6)).contractile_moment) / 2e-6
+    slope_nu = (
+        moment(replace(gel, poisson=0.48)).contractile_moment - moment(replace(gel, poisson=0.42)).contractile_moment
+    ) / 0.06
+    slope_h = (
+        moment(replace(gel, thickness=21e-6)).contractile_moment
+        - moment(replace(gel, thickness=19e-6)).contractile_moment
+    ) / 2e-6
     assert np.sqrt(loose.budget["poisson"]) == pytest.approx(abs(slope_nu) * 0.03, rel=0.15)
     assert np.sqrt(loose.budget["thickness"]) == pytest.approx(abs(slope_h) * 2e-6, rel=0.15)

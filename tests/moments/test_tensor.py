@@ -43,8 +43,10 @@ def test_isotropic_tensor_has_no_axis():
     ("tensor", "scale"), [([-2.0, 0.4, -0.8], 0.02), ([-2.0, 0.4, -0.8], 0.3), ([-1.0, 0.0, -1.05], 0.2)]
 )
 def test_axis_error_equals_the_circular_scatter_of_draws(tensor, scale):
-    """scipy.stats.circstd of the doubled angle (axial data, Fisher, Statistical Analysis of Circular Data, 1993), its own draws
-    and numpy's eigenvectors; for wide scatter the two measures of spread differ, so the bound is the uniform's 52 degrees."""
+    """scipy.stats.circstd of the doubled angle (axial data, Fisher, Statistical Analysis of Circular Data, 1993), its
+    own draws
+    and numpy's eigenvectors; for wide scatter the two measures of spread differ, so the bound is the uniform's 52
+    degrees."""
     rng = np.random.default_rng(3)
     covariance = scale**2 * np.array([[1.0, 0.1, -0.2], [0.1, 0.6, 0.0], [-0.2, 0.0, 0.9]])
     draws = rng.multivariate_normal(tensor, covariance, size=20000)

@@ -38,9 +38,12 @@ def known_cell(gel: Gel, *, noise: float = 2e-9, seed: int = 3, n: int = 320, pi
     block = traction.reshape(2, n // 2, 2, n // 2, 2).mean(axis=(2, 4))
     u = displacement(gel, block, 2 * pixel)
     area = pixel**2
-    dipole = np.array([
-        np.sum(dx * traction[0]), 0.5 * np.sum(dx * traction[1] + dy * traction[0]), np.sum(dy * traction[1])
-    ]) * area  # fmt: skip
+    dipole = (
+        np.array(
+            [np.sum(dx * traction[0]), 0.5 * np.sum(dx * traction[1] + dy * traction[0]), np.sum(dy * traction[1])]
+        )
+        * area
+    )
     step = spacing_px // 2
     u = u[:, ::step, ::step]
     axis = (np.arange(n // 2) * 2 + 0.5)[::step] * pixel
@@ -48,6 +51,14 @@ def known_cell(gel: Gel, *, noise: float = 2e-9, seed: int = 3, n: int = 320, pi
     u = u + noise * rng.standard_normal(u.shape)
     ones, zero = np.full(u.shape[1:], noise**-2), np.zeros(u.shape[1:])
     field = DisplacementField(
-        axis, axis, u, np.stack([ones, zero, ones]), np.ones(u.shape[1:], bool), np.zeros(2), noise, (spacing_px * pixel) ** 2, 0
+        axis,
+        axis,
+        u,
+        np.stack([ones, zero, ones]),
+        np.ones(u.shape[1:], bool),
+        np.zeros(2),
+        noise,
+        (spacing_px * pixel) ** 2,
+        0,
     )
     return KnownCell(field, Outlines(inside.astype(np.int32), "label image"), pixel, gel, dipole, traction, radius)

@@ -19,7 +19,7 @@ class SmallProblem:
     noise: float
 
 
-@pytest.fixture()
+@pytest.fixture
 def small_problem() -> SmallProblem:
     """Forty vectors around a cell of 20 lattice cells, noise 3 nm."""
     rng = np.random.default_rng(7)

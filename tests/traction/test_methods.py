@@ -119,9 +119,15 @@ def test_fourier_error_bar_is_the_scatter_of_the_noise():
 @pytest.fixture(scope="module")
 def bead_field():
     return random_field(
-        np.random.default_rng(11), gel=Gel(4000.0, 0.45, 30e-6), shape_px=(384, 384), pixel_size=0.2e-6, cells=1,
-        peak_shift_px=2.5, density_per_px2=0.02, photons=600.0,
-    )  # fmt: skip
+        np.random.default_rng(11),
+        gel=Gel(4000.0, 0.45, 30e-6),
+        shape_px=(384, 384),
+        pixel_size=0.2e-6,
+        cells=1,
+        peak_shift_px=2.5,
+        density_per_px2=0.02,
+        photons=600.0,
+    )
 
 
 @pytest.fixture(scope="module")
@@ -147,13 +153,15 @@ def test_image_method_finds_what_the_beads_were_given(bead_field, image_result):
 
 
 def test_image_method_beats_no_information_it_does_not_have(bead_field, image_result):
-    """Quoted displacement information against the Cramer-Rao bound from the known photons (sum of squared gradients of the
+    """Quoted displacement information against the Cramer-Rao bound from the known photons (sum of squared gradients
+    of the
     expected frame over its variance, common practice): not more than it, not less than 60 % of it."""
     *_, result = image_result
     f = bead_field
     expected = ndimage.gaussian_filter(f.relaxed.astype(float), 0.0)
     data = result.data
-    # The bound of two frames that differ by a shift: variances add. Noise in the gradients is taken off with the known variance.
+    # The bound of two frames that differ by a shift: variances add. Noise in the gradients is taken off with the
+    # known variance.
     gy, gx = np.gradient(expected)
     noise = f.relaxed_variance / 2  # of a central difference of independent pixels
     both = f.relaxed_variance + f.stressed_variance
@@ -189,7 +197,7 @@ def test_brightness_and_lost_beads_do_not_matter(bead_field, image_result):
 
 def test_an_outline_drawn_too_small_is_noticed(bead_field, image_result):
     """The same beads with an outline shrunk by 2 um: the ring outside it is not explained, and the note says so."""
-    frames, start, outlines, result = image_result
+    frames, start, _, result = image_result
     f = bead_field
     depth = ndimage.distance_transform_edt(f.labels > 0) * f.pixel_size
     small = Outlines(np.where(depth > 2e-6, f.labels, 0).astype(np.int32), "label image")

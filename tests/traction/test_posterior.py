@@ -89,7 +89,7 @@ def test_balance_is_conditioning(small_problem):
     b = np.stack([np.r_[one, zero], np.r_[zero, one], np.r_[-(y - y.mean()), x - x.mean()]])
     b /= np.linalg.norm(b, axis=1, keepdims=True)
     for amplitude in (200.0, 600.0):
-        mean, covariance, evidence, _ = posterior(normal, (prior,), np.array([amplitude]))
+        mean, _, evidence, _ = posterior(normal, (prior,), np.array([amplitude]))
         ours.append(evidence)
         g, z, noise = dense(small_problem)
         prior_cov = amplitude**2 * k
@@ -106,7 +106,8 @@ def test_balance_is_conditioning(small_problem):
         balance = both[data_cov.shape[0] :, data_cov.shape[0] :] / 25.0
         theirs.append(joint - stats.multivariate_normal.logpdf(np.zeros(3), cov=balance))
         assert np.abs(b @ mean).max() < 1e-9 * np.abs(mean).max()
-    # p(d | balance) = p(d, balance) / p(balance); the record leaves p(balance) out, which for a proper prior is not flat.
+    # p(d | balance) = p(d, balance) / p(balance); the record leaves p(balance) out, which for a proper prior is not
+    # flat.
     balance_change = np.diff(
         [stats.multivariate_normal.logpdf(np.zeros(3), cov=a**2 * b @ k @ b.T / 25.0) for a in (200.0, 600.0)]
     )

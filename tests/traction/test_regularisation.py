@@ -10,7 +10,7 @@ from tfm.errors import InputError
 from tfm.traction.regularisation import CHOICES, choose_lambda
 
 
-@pytest.fixture()
+@pytest.fixture
 def dense():
     """A smoothing operator on 60 points, data with 2 % noise, and its singular value decomposition."""
     rng = np.random.default_rng(5)
@@ -67,7 +67,8 @@ def test_evidence(dense, known):
 
 
 def test_lcurve_corner(dense):
-    """Largest curvature of the dense L-curve by finite differences of an interpolating spline (Hansen & O'Leary 1993)."""
+    """Largest curvature of the dense L-curve by finite differences of an interpolating spline (Hansen & O'Leary
+    1993)."""
     from scipy.interpolate import CubicSpline
 
     g, d, _, s, power = dense

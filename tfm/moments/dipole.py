@@ -1,6 +1,7 @@
 r"""The force-dipole tensor of every cell, with its error bar.
 
-:math:`P_{ij} = \int (x_i - c_i) T_j\,dA` over the cell, symmetric part, c the outline's centroid. It is a linear functional
+:math:`P_{ij} = \int (x_i - c_i) T_j\,dA` over the cell, symmetric part, c the outline's centroid. It is a linear
+functional
 of the traction, so mean and covariance follow exactly from the posterior.
 """
 
@@ -24,9 +25,7 @@ from tfm.traction.sensitivity import mean_with_gel
 __all__ = ["cell_dipoles", "dipole_functionals"]
 
 
-def dipole_functionals(
-    traction: TractionField, label: int, centroid: NDArray[np.float64]
-) -> NDArray[np.float64]:
+def dipole_functionals(traction: TractionField, label: int, centroid: NDArray[np.float64]) -> NDArray[np.float64]:
     """``(5, 2 n)``: dipole xx, xy, yy (N m per Pa), then torque about the centroid; last row unused when no posterior.
 
     Rows: symmetric dipole xx, xy, yy; torque (N m per Pa); trace.
@@ -41,10 +40,15 @@ def dipole_functionals(
     mx = weights.T @ (traction.x[p.columns[cells]] - centroid[0]) * area
     my = weights.T @ (traction.y[p.rows[cells]] - centroid[1]) * area
     zero = np.zeros(n)
-    return np.stack([
-        np.concatenate([mx, zero]), 0.5 * np.concatenate([my, mx]), np.concatenate([zero, my]),
-        np.concatenate([-my, mx]), np.concatenate([mx, my]),
-    ])  # fmt: skip
+    return np.stack(
+        [
+            np.concatenate([mx, zero]),
+            0.5 * np.concatenate([my, mx]),
+            np.concatenate([zero, my]),
+            np.concatenate([-my, mx]),
+            np.concatenate([mx, my]),
+        ]
+    )
 
 
 def _geometry(mask: NDArray[np.bool_], pixel: float) -> tuple[NDArray[np.float64], float, float | None]:
@@ -52,7 +56,9 @@ def _geometry(mask: NDArray[np.bool_], pixel: float) -> tuple[NDArray[np.float64
     return np.array([columns.mean(), rows.mean()]) * pixel, rows.size * pixel**2, outline_axis(mask)
 
 
-def _mean_magnitude(tx: NDArray[np.float64], ty: NDArray[np.float64], variance: NDArray[np.float64]) -> NDArray[np.float64]:
+def _mean_magnitude(
+    tx: NDArray[np.float64], ty: NDArray[np.float64], variance: NDArray[np.float64]
+) -> NDArray[np.float64]:
     """Expected length of a 2-D Gaussian vector with mean (tx, ty) and ``variance`` per component (Rice's mean)."""
     nu2 = tx**2 + ty**2
     s2 = np.maximum(variance, 1e-300)
@@ -81,7 +87,8 @@ def cell_dipoles(
     Notes
     -----
     With E, nu, h and pixel size uncertain, ``total_covariance = covariance + sum_q sd_q^2 (dP/dq)(dP/dq)^T``. P is
-    proportional to E. By similarity P = E p^3 f(h/p), so dP/dp = 3 P / p - (h / p) dP/dh. dP/dnu and dP/dh are taken from
+    proportional to E. By similarity P = E p^3 f(h/p), so dP/dp = 3 P / p - (h / p) dP/dh. dP/dnu and dP/dh are taken
+    from
     solving the same beads again on a changed gel.
     """
     labels = [int(v) for v in np.unique(traction.labels) if v > 0]
@@ -90,7 +97,9 @@ def cell_dipoles(
     if traction.posterior is not None and traction.data is not None:
         energy = energy_matrix(traction.data, traction)
     return tuple(
-        _one_cell(traction, outlines, pixel_size, label, energy, shifts) for label in labels if (outlines.labels == label).any()
+        _one_cell(traction, outlines, pixel_size, label, energy, shifts)
+        for label in labels
+        if (outlines.labels == label).any()
     )
 
 
@@ -113,7 +122,8 @@ def _gel_shifts(traction: TractionField, pixel: float, pixel_sd: float) -> Mappi
         if gel.thickness_sd > 0:
             shifts["thickness"] = by_thickness * gel.thickness_sd
     if pixel_sd > 0:
-        # Coefficients are tractions, T = E f(h/p) at fixed images: dT/dp = -(h/p) dT/dh. Lengths add 3 P / p in _budget.
+        # Coefficients are tractions, T = E f(h/p) at fixed images: dT/dp = -(h/p) dT/dh. Lengths add 3 P / p in
+        # _budget.
         elastic = np.zeros_like(p.mean) if by_thickness is None else -by_thickness * (gel.thickness or 0.0) / pixel
         shifts["pixel"] = elastic * pixel_sd
         shifts["_pixel_relative"] = np.array([pixel_sd / pixel])
@@ -121,9 +131,13 @@ def _gel_shifts(traction: TractionField, pixel: float, pixel_sd: float) -> Mappi
 
 
 def _one_cell(
-    traction: TractionField, outlines: Outlines, pixel: float, label: int, energy: NDArray[np.float64] | None,
+    traction: TractionField,
+    outlines: Outlines,
+    pixel: float,
+    label: int,
+    energy: NDArray[np.float64] | None,
     shifts: Mapping[str, NDArray[np.float64]],
-) -> CellDipole:  # fmt: skip
+) -> CellDipole:
     mask = outlines.labels == label
     centroid, area, long_axis = _geometry(mask, pixel)
     on = traction.labels == label
@@ -137,7 +151,9 @@ def _one_cell(
         "torque": float(np.sum(dx * ty - dy * tx) * da),
         "force_total": float(np.hypot(tx, ty).sum() * da),
         "traction_rms": float(np.sqrt(np.mean(tx**2 + ty**2))),
-        "strain_energy": 0.5 * da * float(np.sum(tx * traction.displacement[0][on] + ty * traction.displacement[1][on])),
+        "strain_energy": 0.5
+        * da
+        * float(np.sum(tx * traction.displacement[0][on] + ty * traction.displacement[1][on])),
         "strain_energy_sd": traction.energy_sd.get(label),
         "covariance": traction.dipole_covariance.get(label),
         "budget": {},
@@ -150,24 +166,41 @@ def _one_cell(
     covariance = numbers["covariance"]
     trace = np.array([-1.0, 0.0, -1.0])
     return CellDipole(
-        cell=label, centroid=centroid, area=area, outline_axis=long_axis, dipole=numbers["dipole"], covariance=covariance,
-        total_covariance=total, major=axes.major, minor=axes.minor, axis=axes.axis,
+        cell=label,
+        centroid=centroid,
+        area=area,
+        outline_axis=long_axis,
+        dipole=numbers["dipole"],
+        covariance=covariance,
+        total_covariance=total,
+        major=axes.major,
+        minor=axes.minor,
+        axis=axes.axis,
         axis_sd=None if covariance is None or axes.axis is None else axis_deviation(numbers["dipole"], covariance),
-        anisotropy=axes.anisotropy, contractile_moment=float(trace @ numbers["dipole"]),
+        anisotropy=axes.anisotropy,
+        contractile_moment=float(trace @ numbers["dipole"]),
         contractile_moment_sd=None if covariance is None else float(np.sqrt(trace @ covariance @ trace)),
         contractile_moment_total_sd=None if total is None else float(np.sqrt(trace @ total @ trace)),
-        net_force=float(np.hypot(*net)), torque=numbers["torque"], force_total=numbers["force_total"],
-        strain_energy=numbers["strain_energy"], strain_energy_sd=numbers["strain_energy_sd"],
-        traction_peak=float(np.hypot(tx, ty).max()), traction_rms=numbers["traction_rms"],
+        net_force=float(np.hypot(*net)),
+        torque=numbers["torque"],
+        force_total=numbers["force_total"],
+        strain_energy=numbers["strain_energy"],
+        strain_energy_sd=numbers["strain_energy_sd"],
+        traction_peak=float(np.hypot(tx, ty).max()),
+        traction_rms=numbers["traction_rms"],
         displacement_peak=float(np.hypot(traction.displacement[0][on], traction.displacement[1][on]).max()),
         budget=numbers["budget"],
-    )  # fmt: skip
+    )
 
 
 def _from_posterior(
-    traction: TractionField, label: int, centroid: NDArray[np.float64], energy: NDArray[np.float64],
-    shifts: Mapping[str, NDArray[np.float64]], numbers: dict[str, Any],
-) -> NDArray[np.float64]:  # fmt: skip
+    traction: TractionField,
+    label: int,
+    centroid: NDArray[np.float64],
+    energy: NDArray[np.float64],
+    shifts: Mapping[str, NDArray[np.float64]],
+    numbers: dict[str, Any],
+) -> NDArray[np.float64]:
     """Fill in what the posterior knows better than its mean field, and return the total covariance."""
     p = traction.posterior
     if p is None or traction.data is None or traction.solution is None:
@@ -184,7 +217,9 @@ def _from_posterior(
     weights = p.basis[cells]
     n = weights.shape[1]
     spread = [
-        np.asarray(weights.multiply(weights @ p.covariance[i * n : (i + 1) * n, i * n : (i + 1) * n]).sum(axis=1)).ravel()
+        np.asarray(
+            weights.multiply(weights @ p.covariance[i * n : (i + 1) * n, i * n : (i + 1) * n]).sum(axis=1)
+        ).ravel()
         for i in range(2)
     ]
     tx, ty = weights @ p.mean[:n], weights @ p.mean[n:]

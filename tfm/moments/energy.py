@@ -1,8 +1,10 @@
 r"""Elastic energies as quadratic forms of the traction's coefficients.
 
-:math:`U = \tfrac12 \int T \cdot u\,dA` (Landau & Lifshitz, Theory of Elasticity, sec. 2 and 8). For a Gaussian posterior
+:math:`U = \tfrac12 \int T \cdot u\,dA` (Landau & Lifshitz, Theory of Elasticity, sec. 2 and 8). For a Gaussian
+posterior
 :math:`c \sim N(m, \Sigma)` a quadratic form has :math:`E[c^T Q c] = m^T Q m + \mathrm{tr}(Q\Sigma)` and variance
-:math:`4 m^T Q\Sigma Q m + 2\,\mathrm{tr}(Q\Sigma Q\Sigma)` (Mathai & Provost, Quadratic Forms in Random Variables, 1992, ch. 3).
+:math:`4 m^T Q\Sigma Q m + 2\,\mathrm{tr}(Q\Sigma Q\Sigma)` (Mathai & Provost, Quadratic Forms in Random Variables,
+1992, ch. 3).
 """
 
 from __future__ import annotations
@@ -23,7 +25,8 @@ __all__ = ["energy_matrix", "field_strain_energy", "mixture_energy", "quadratic_
 def energy_matrix(data: LinearData, traction: TractionField) -> NDArray[np.float64]:
     """``(2 n, 2 n)`` J/Pa^2: E with ``c^T E c`` = integral of T . u (twice the strain energy).
 
-    Symmetric by reciprocity (Betti); source and receiver are averaged over the lattice cells, so it is exact for traction
+    Symmetric by reciprocity (Betti); source and receiver are averaged over the lattice cells, so it is exact for
+    traction
     that is constant on each lattice cell.
     """
     kernel = node_kernel(traction.gel, data.lattice.shape, data.lattice.spacing, receiver="average")
@@ -62,10 +65,14 @@ UNSEEN = 0.5
 def mixture_energy(q: NDArray[np.float64], solution: Solution) -> tuple[float, float]:
     """Expectation and standard deviation of ``c^T q c`` over the mixture of posteriors.
 
-    The part ``trace(q covariance)`` is energy of structure that the beads do not resolve; the prior supplies its size, and how
+    The part ``trace(q covariance)`` is energy of structure that the beads do not resolve; the prior supplies its
+    size, and how
     adhesions are really shaped changes it by half of itself or so. That uncertainty is added.
     """
-    values = [(c.weight, *quadratic_moments(q, c.mean, c.covariance), float(np.sum(q * c.covariance))) for c in solution.components]
+    values = [
+        (c.weight, *quadratic_moments(q, c.mean, c.covariance), float(np.sum(q * c.covariance)))
+        for c in solution.components
+    ]
     mean = sum(w * v for w, v, _, _ in values)
     variance = sum(w * (sd**2 + (UNSEEN * unseen) ** 2 + (v - mean) ** 2) for w, v, sd, unseen in values)
     return float(mean), float(np.sqrt(variance))
@@ -93,7 +100,7 @@ def field_strain_energy(traction: TractionField, *, route: str = "real space") -
         kernel = node_kernel(traction.gel, traction.traction.shape[1:], traction.spacing, receiver="average")
         u = displacement(traction.gel, traction.traction, traction.spacing, kernel=kernel)
         t_hat, u_hat = (np.fft.fft2(a, s=shape) for a in (traction.traction, u))
-        return 0.5 * area * float(np.sum(t_hat.conj() * u_hat).real) / (shape[0] * shape[1])
+        return float(0.5 * area * np.sum((t_hat.conj() * u_hat).real) / (shape[0] * shape[1]))
     if route == "coefficients":
         if traction.data is None or traction.posterior is None:
             raise InputError("this traction has no coefficients", code="no-posterior", remedy="use another route")

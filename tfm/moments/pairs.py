@@ -1,6 +1,7 @@
 r"""Elastic interaction of two cells in one field, from their whole traction fields and from their tensors alone.
 
-:math:`W_{ab} = \int T_a \cdot u_b\,dA` (= :math:`W_{ba}`, Betti's theorem). With the displacement :math:`u_a` that cell a
+:math:`W_{ab} = \int T_a \cdot u_b\,dA` (= :math:`W_{ba}`, Betti's theorem). With the displacement :math:`u_a` that
+cell a
 sends, force and torque on b for motion that lowers W are :math:`-\int T_b \cdot \partial_i u_a` and
 :math:`-\int [(\hat z \times T_b) \cdot u_a + T_b \cdot ((\hat z \times (x - c_b)) \cdot \nabla) u_a]`.
 Passive defects (dead loads) carry the opposite sign.
@@ -40,7 +41,9 @@ def cell_pairs(
         return ()
     kernel = node_kernel(traction.gel, traction.traction.shape[1:], traction.spacing, receiver="average")
     alone = {
-        d.cell: displacement(traction.gel, traction.traction * (traction.labels == d.cell), traction.spacing, kernel=kernel)
+        d.cell: displacement(
+            traction.gel, traction.traction * (traction.labels == d.cell), traction.spacing, kernel=kernel
+        )
         for d in dipoles
     }
     energy = None
@@ -52,9 +55,13 @@ def cell_pairs(
 
 
 def _pair(
-    traction: TractionField, a: CellDipole, b: CellDipole, alone: dict[int, NDArray[np.float64]],
-    energy: NDArray[np.float64] | None, noise_energy: float | None,
-) -> CellPair:  # fmt: skip
+    traction: TractionField,
+    a: CellDipole,
+    b: CellDipole,
+    alone: dict[int, NDArray[np.float64]],
+    energy: NDArray[np.float64] | None,
+    noise_energy: float | None,
+) -> CellPair:
     separation = b.centroid - a.centroid
     distance = float(np.hypot(*separation))
     on_b = traction.labels == b.cell
@@ -87,14 +94,24 @@ def _pair(
     force, torque = _force_and_torque(traction, alone[a.cell], b, on_b)
     size = max(np.sqrt(a.area), np.sqrt(b.area))
     extras: dict[str, Any] = {"lengths_apart": distance / size}
-    notes = ()
+    notes: tuple[str, ...] = ()
     if distance < POINT_DIPOLE_LENGTHS * size:
         notes = (f"cells are {distance / size:.1f} cell lengths apart: trust energy, not dipole_energy",)
     return CellPair(
-        a.cell, b.cell, distance, float(np.arctan2(separation[1], separation[0])), whole, whole_sd,
-        float(np.asarray(point.energy)), point_sd, force, torque,
-        None if noise_energy is None else abs(whole) / noise_energy, extras, notes,
-    )  # fmt: skip
+        a.cell,
+        b.cell,
+        distance,
+        float(np.arctan2(separation[1], separation[0])),
+        whole,
+        whole_sd,
+        float(np.asarray(point.energy)),
+        point_sd,
+        force,
+        torque,
+        None if noise_energy is None else abs(whole) / noise_energy,
+        extras,
+        notes,
+    )
 
 
 def _force_and_torque(

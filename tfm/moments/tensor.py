@@ -12,7 +12,8 @@ __all__ = ["PrincipalAxes", "axis_deviation", "outline_axis", "principal_axes", 
 
 @dataclass(frozen=True)
 class PrincipalAxes:
-    """``major`` is the principal value of larger magnitude, ``axis`` its direction in (-pi/2, pi/2] from +x towards +y."""
+    """``major`` is the principal value of larger magnitude, ``axis`` its direction in (-pi/2, pi/2] from +x towards
+    +y."""
 
     major: float
     minor: float

@@ -41,7 +41,11 @@ class Blocks:
 
 
 def make_blocks(
-    outlined: NDArray[np.bool_], *, smallest: int = 2, largest: int = 16, ratio: float = 4.0,
+    outlined: NDArray[np.bool_],
+    *,
+    smallest: int = 2,
+    largest: int = 16,
+    ratio: float = 4.0,
     keep_whole: NDArray[np.bool_] | None = None,
 ) -> Blocks:
     """Blocks whose edge is at most their distance from the outlines divided by ``ratio``.
@@ -53,7 +57,8 @@ def make_blocks(
     smallest, largest
         Edge in grid cells, powers of two times ``smallest``.
     keep_whole
-        ``(ny, nx)``: only blocks that are True throughout may be larger than ``smallest`` (so that a block's centre is the
+        ``(ny, nx)``: only blocks that are True throughout may be larger than ``smallest`` (so that a block's centre
+        is the
         centre of its data).
 
     Examples
@@ -89,6 +94,9 @@ def make_blocks(
         count += r.size
         size //= 2
     return Blocks(
-        np.concatenate(rows).astype(float), np.concatenate(columns).astype(float), np.concatenate(sizes), member,
+        np.concatenate(rows).astype(float),
+        np.concatenate(columns).astype(float),
+        np.concatenate(sizes),
+        member,
         np.concatenate(nearest).astype(float),
-    )  # fmt: skip
+    )

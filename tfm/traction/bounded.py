@@ -1,4 +1,5 @@
-"""Traction that lives only inside the outlines, from displacement vectors with known precision (physics of Hooke, not of
+"""Traction that lives only inside the outlines, from displacement vectors with known precision (physics of Hooke, not
+of
 pixels: the pixel method in :mod:`tfm.traction.pixels` shares everything but the data)."""
 
 from __future__ import annotations
@@ -81,10 +82,15 @@ def vector_data(
     value = np.stack([sums[2] * sums[3] - sums[1] * sums[4], sums[0] * sums[4] - sums[1] * sums[3]]) / det
     step = spacing / lattice.spacing
     return LinearData(
-        lattice, basis,
-        np.round(rows[0] + step * blocks.rows[used], 4), np.round(columns[0] + step * blocks.columns[used], 4),
-        value, sums[:3], groups, nuisance,
-    )  # fmt: skip
+        lattice,
+        basis,
+        np.round(rows[0] + step * blocks.rows[used], 4),
+        np.round(columns[0] + step * blocks.columns[used], 4),
+        value,
+        sums[:3],
+        groups,
+        nuisance,
+    )
 
 
 def first_guess(data: LinearData, gel: Gel) -> tuple[Component, ...]:
@@ -139,7 +145,8 @@ def infer_bounded(
 ) -> TractionField:
     r"""Posterior of the traction inside the outlines, given displacement vectors.
 
-    Minimises :math:`(d - GWc - Zo)^T P (d - GWc - Zo) + c^T \Lambda c` under balance of every free group of cells; prior
+    Minimises :math:`(d - GWc - Zo)^T P (d - GWc - Zo) + c^T \Lambda c` under balance of every free group of cells;
+    prior
     strength and correlation length maximise the evidence (MacKay 1992). Valid for small strain and no normal traction.
 
     Parameters
@@ -175,8 +182,9 @@ def infer_bounded(
     x0 = field.x[0] - edge * np.floor(field.x[0] / edge + 0.5)
     y0 = field.y[0] - edge * np.floor(field.y[0] / edge + 0.5)
     shape = (
-        int(np.ceil(((ny - 1) * pixel_size - y0) / edge)) + 1, int(np.ceil(((nx - 1) * pixel_size - x0) / edge)) + 1
-    )  # fmt: skip
+        int(np.ceil(((ny - 1) * pixel_size - y0) / edge)) + 1,
+        int(np.ceil(((nx - 1) * pixel_size - x0) / edge)) + 1,
+    )
     lattice = Lattice(float(x0), float(y0), edge, shape)
     covered = cover_outlines(lattice, outlines.labels, pixel_size)
     basis = make_nodes(covered, step=choose_step(covered, most=most_coefficients))
@@ -184,7 +192,9 @@ def infer_bounded(
     data = vector_data(field, lattice, basis, covered, groups=groups, nuisance=nuisance)
     if 2 * data.rows.size < 40:
         raise MeasurementError(
-            f"only {data.rows.size} valid displacement vectors", code="too-few-vectors", remedy="use more or brighter beads"
+            f"only {data.rows.size} valid displacement vectors",
+            code="too-few-vectors",
+            remedy="use more or brighter beads",
         )
     solution, normal = solve(data, gel)
     # Windows that overlap share pixels: as many degrees of freedom as independent vectors, not as vectors.

@@ -1,6 +1,7 @@
 r"""Regularised inversion in Fourier space, the trade's classic, for comparison and for fields without images.
 
-:math:`\hat T = (\hat G^T\hat G + \lambda^2)^{-1}\hat G^T \hat u` (Butler et al., Am J Physiol Cell 282:C595, 2002; Sabass et al.,
+:math:`\hat T = (\hat G^T\hat G + \lambda^2)^{-1}\hat G^T \hat u` (Butler et al., Am J Physiol Cell 282:C595, 2002;
+Sabass et al.,
 Biophys J 94:207, 2008). The kernel is the aperiodic one of :mod:`tfm.gel` on a padded grid, so cells do not feel their
 periodic images; displacement beyond the field of view is taken as zero.
 """
@@ -29,7 +30,9 @@ def _complete(field: DisplacementField) -> NDArray[np.float64]:
         return u
     if field.valid.sum() < 20:
         raise MeasurementError(
-            f"only {int(field.valid.sum())} valid displacement vectors", code="too-few-vectors", remedy="use more or brighter beads"
+            f"only {int(field.valid.sum())} valid displacement vectors",
+            code="too-few-vectors",
+            remedy="use more or brighter beads",
         )
     known = np.argwhere(field.valid)
     for i in range(2):
@@ -85,7 +88,8 @@ def infer_fourier(
     Returns
     -------
     TractionField
-        Traction everywhere (the method does not know the outlines); ``dipole_covariance`` carries the displacement noise
+        Traction everywhere (the method does not know the outlines); ``dipole_covariance`` carries the displacement
+        noise
         but not the bias of the smoothing, which is why ``image`` and ``bounded`` exist.
 
     Raises
@@ -98,34 +102,59 @@ def infer_fourier(
     covered = cover_outlines(lattice, outlines.labels, pixel_size)
     kernel = node_kernel(gel, lattice.shape, spacing, receiver="average")
     u = _complete(field)
-    u = u - np.median(u[:, field.valid & (covered == 0)] if (field.valid & (covered == 0)).any() else u.reshape(2, -1), axis=1)[
-        :, None, None
-    ]
+    u = (
+        u
+        - np.median(
+            u[:, field.valid & (covered == 0)] if (field.valid & (covered == 0)).any() else u.reshape(2, -1), axis=1
+        )[:, None, None]
+    )
     tikhonov = _Filter(kernel, lattice.shape)
     power = np.abs(tikhonov.spectrum(u)) ** 2 * tikhonov.weight
     counts = np.broadcast_to(tikhonov.weight, power.shape)
     noise = field.noise if np.isfinite(field.noise) else None
-    # Padding adds zeros, not data: the noise per transformed coefficient is that of the share of the grid that is measured.
+    # Padding adds zeros, not data: the noise per transformed coefficient is that of the share of the grid that is
+    # measured.
     share = lattice.shape[0] * lattice.shape[1] / (tikhonov.padded[0] * tikhonov.padded[1])
     g = np.repeat(np.abs(tikhonov.values).ravel(), counts.ravel().astype(int))
     p = np.repeat((power / tikhonov.weight).ravel(), counts.ravel().astype(int))
     lam = choose_lambda(g, p, choice=choice, noise=None if noise is None else noise * np.sqrt(share))
     traction = tikhonov.solve(u, lam)
-    covariance, energy_sd = _noise_of_moments(tikhonov, lam, lattice, covered, field, outlines, pixel_size, traction, noise)
+    covariance, energy_sd = _noise_of_moments(
+        tikhonov, lam, lattice, covered, field, outlines, pixel_size, traction, noise
+    )
     notes = list(field.notes)
     if not field.valid.all():
         notes.append(f"{field.rejected} gaps in the displacement were filled for the Fourier inversion")
     return TractionField(
-        lattice.x, lattice.y, spacing, traction, displacement(gel, traction, spacing, kernel=kernel), covered, gel, "fourier", None,
-        np.zeros(2), float("nan"), {"lambda_m_per_Pa": lam, "lambda_choice": choice}, tuple(notes),
-        dipole_covariance=covariance, energy_sd=energy_sd,
-    )  # fmt: skip
+        lattice.x,
+        lattice.y,
+        spacing,
+        traction,
+        displacement(gel, traction, spacing, kernel=kernel),
+        covered,
+        gel,
+        "fourier",
+        None,
+        np.zeros(2),
+        float("nan"),
+        {"lambda_m_per_Pa": lam, "lambda_choice": choice},
+        tuple(notes),
+        dipole_covariance=covariance,
+        energy_sd=energy_sd,
+    )
 
 
 def _noise_of_moments(
-    tikhonov: _Filter, lam: float, lattice: Lattice, covered: NDArray[np.int32], field: DisplacementField, outlines: Outlines,
-    pixel: float, traction: NDArray[np.float64], noise: float | None,
-) -> tuple[dict[int, NDArray[np.float64]], dict[int, float]]:  # fmt: skip
+    tikhonov: _Filter,
+    lam: float,
+    lattice: Lattice,
+    covered: NDArray[np.int32],
+    field: DisplacementField,
+    outlines: Outlines,
+    pixel: float,
+    traction: NDArray[np.float64],
+    noise: float | None,
+) -> tuple[dict[int, NDArray[np.float64]], dict[int, float]]:
     """Displacement noise carried to every dipole through the adjoint of the (self-adjoint) filter."""
     if noise is None:
         return {}, {}

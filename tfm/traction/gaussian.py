@@ -1,8 +1,10 @@
 r"""Gaussian posterior of the traction and its evidence, for data that are displacements with known precision.
 
 Model: :math:`d = G W c + Z o + e`, :math:`e \sim N(0, P^{-1})`; *c* node coefficients with the prior of
-:mod:`tfm.traction.prior`, *o* offset of the frame (flat prior), balance :math:`B c = 0` exactly. Posterior and evidence are
-those of the linear Gaussian model (Rasmussen & Williams 2006, sec. 2.2; MacKay, Neural Computation 4:415, 1992); the balance
+:mod:`tfm.traction.prior`, *o* offset of the frame (flat prior), balance :math:`B c = 0` exactly. Posterior and
+evidence are
+those of the linear Gaussian model (Rasmussen & Williams 2006, sec. 2.2; MacKay, Neural Computation 4:415, 1992); the
+balance
 is imposed by conditioning: :math:`p(d \mid Bc=0) = p(d)\,p(Bc=0 \mid d)/p(Bc=0)`.
 """
 
@@ -18,7 +20,7 @@ from scipy import linalg
 from tfm.errors import ConvergenceError
 from tfm.gel import Gel, node_kernel
 from tfm.traction.lattice import Lattice, NodeBasis
-from tfm.traction.prior import CellPrior, first_moments, make_prior
+from tfm.traction.prior import CellPrior, make_prior
 
 __all__ = [
     "Component",
@@ -82,7 +84,8 @@ class NormalEquations:
 
     ``information`` ``(2 n, 2 n)`` 1/Pa^2, ``score`` ``(2 n,)`` 1/Pa, ``energy`` = weighted sum of squares left when the
     traction is 0, ``balance`` ``(n_b, 2 n)``; ``response`` ``(2 N, 2 n)`` m/Pa maps coefficients to data, ``motions``
-    ``(2 N, k)`` the frame's motions; ``motion_solver`` ``(k, 1 + 2 n)`` gives the motions that go with coefficients ``c`` as
+    ``(2 N, k)`` the frame's motions; ``motion_solver`` ``(k, 1 + 2 n)`` gives the motions that go with coefficients
+    ``c`` as
     ``motion_solver @ [1, c]``; ``count`` = number of data less the motions.
     """
 
@@ -116,7 +119,8 @@ class Solution:
     Attributes
     ----------
     mean, covariance
-        ``(2 n,)`` Pa and ``(2 n, 2 n)`` Pa^2 of the mixture: the spread between its components is part of the covariance.
+        ``(2 n,)`` Pa and ``(2 n, 2 n)`` Pa^2 of the mixture: the spread between its components is part of the
+        covariance.
     nuisance
         Estimated offset (m), rotation (rad) and scale.
     log_evidence
@@ -195,7 +199,8 @@ def nuisance_columns(data: LinearData) -> NDArray[np.float64]:
 def _weigh(precision: NDArray[np.float64], block: NDArray[np.float64]) -> NDArray[np.float64]:
     """Multiply ``(2 N, ...)`` (all x, then all y) by the 2 x 2 precisions.
 
-    No square root is taken: a patch without a bead may carry a slightly indefinite precision, because the product of two
+    No square root is taken: a patch without a bead may carry a slightly indefinite precision, because the product of
+    two
     noisy gradients scatters around zero; clipping it would bias the sum.
     """
     n = precision.shape[1]
@@ -204,9 +209,7 @@ def _weigh(precision: NDArray[np.float64], block: NDArray[np.float64]) -> NDArra
     return np.concatenate([pxx * block[:n] + pxy * block[n:], pxy * block[:n] + pyy * block[n:]])
 
 
-def balance_rows(
-    basis: NodeBasis, lattice: Lattice, groups: Sequence[Sequence[int]]
-) -> NDArray[np.float64]:
+def balance_rows(basis: NodeBasis, lattice: Lattice, groups: Sequence[Sequence[int]]) -> NDArray[np.float64]:
     """``(3 n_groups, 2 n)``: net force x, y and torque of each group, scaled to rows of unit length."""
     n, area = basis.size, lattice.spacing**2
     rows = []
@@ -244,9 +247,15 @@ def normal_equations(data: LinearData, gel: Gel, *, response: NDArray[np.float64
     energy -= float(zd @ solved[:, 0])
     solved[:, 1:] *= -1.0
     return NormalEquations(
-        0.5 * (information + information.T), score, energy,
-        balance_rows(data.basis, data.lattice, data.groups), response, z, solved, 2 * data.rows.size - z.shape[1],
-    )  # fmt: skip
+        0.5 * (information + information.T),
+        score,
+        energy,
+        balance_rows(data.basis, data.lattice, data.groups),
+        response,
+        z,
+        solved,
+        2 * data.rows.size - z.shape[1],
+    )
 
 
 def posterior(
@@ -350,11 +359,15 @@ def _strengthen(
 def _faintest(prior: Sequence[CellPrior], mean: NDArray[np.float64]) -> NDArray[np.float64]:
     """Log of the smallest amplitude that is believed of each cell.
 
-    The evidence of a faint cell has its maximum at no structure at all, a traction that only grows outwards from the middle.
-    Real cells pull at spots, so the rest is at least 2.5 times as strong as the smoothest traction with the same moments (on
+    The evidence of a faint cell has its maximum at no structure at all, a traction that only grows outwards from the
+    middle.
+    Real cells pull at spots, so the rest is at least 2.5 times as strong as the smoothest traction with the same
+    moments (on
     invented cells with spots of 1-8 um^2 well-determined amplitudes are 2 to 5 times its root mean square).
     """
-    smooth = [1e-30 if c.moments is None else np.sqrt(np.sum((c.moments @ mean[c.index]) ** 2) / c.index.size) for c in prior]
+    smooth = [
+        1e-30 if c.moments is None else np.sqrt(np.sum((c.moments @ mean[c.index]) ** 2) / c.index.size) for c in prior
+    ]
     return np.log(2.5 * np.maximum(smooth, 1e-30))
 
 
@@ -426,7 +439,8 @@ def best_posterior(
 
 
 def _length_belief(length: float) -> float:
-    """Log prior of the correlation length: adhesions are one to a few um wide (common practice), log-normal, 1 um x/: 1.5."""
+    """Log prior of the correlation length: adhesions are one to a few um wide (common practice), log-normal, 1 um x/:
+    1.5."""
     return float(-0.5 * (np.log(length / 1.0e-6) / np.log(1.5)) ** 2)
 
 

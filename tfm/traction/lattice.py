@@ -25,12 +25,12 @@ class Lattice:
     @property
     def x(self) -> NDArray[np.float64]:
         """``(nx,)`` m, centres of the columns."""
-        return self.x0 + self.spacing * np.arange(self.shape[1])
+        return np.asarray(self.x0 + self.spacing * np.arange(self.shape[1]), np.float64)
 
     @property
     def y(self) -> NDArray[np.float64]:
         """``(ny,)`` m, centres of the rows."""
-        return self.y0 + self.spacing * np.arange(self.shape[0])
+        return np.asarray(self.y0 + self.spacing * np.arange(self.shape[0]), np.float64)
 
 
 @dataclass(frozen=True)
@@ -82,9 +82,10 @@ def image_lattice(shape: tuple[int, int], pixel_size: float, target: float = 0.8
     ny, nx = shape[0] // b, shape[1] // b
     if min(ny, nx) < 8:
         raise MeasurementError(
-            f"the image of {shape[1]} x {shape[0]} px is too small to infer traction", code="image-too-small",
+            f"the image of {shape[1]} x {shape[0]} px is too small to infer traction",
+            code="image-too-small",
             remedy="use a field of at least 64 x 64 px with ground around the cell",
-        )  # fmt: skip
+        )
     offset = 0.5 * (b - 1) * pixel_size
     return Lattice(offset, offset, b * pixel_size, (ny, nx)), b
 
@@ -166,12 +167,20 @@ def make_nodes(covered: NDArray[np.int32], *, step: int) -> NodeBasis:
         depth = ndimage.distance_transform_edt(covered == label) - 0.5
         depths.append(ndimage.map_coordinates(depth, np.stack([nr, nc]), order=1, mode="nearest"))
     if not parts:
-        raise MeasurementError("no outline lies inside the image", code="no-outline", remedy="check the outline's frame")
+        raise MeasurementError(
+            "no outline lies inside the image", code="no-outline", remedy="check the outline's frame"
+        )
     return NodeBasis(
-        np.concatenate(rows), np.concatenate(columns), np.concatenate(labels),
+        np.concatenate(rows),
+        np.concatenate(columns),
+        np.concatenate(labels),
         sparse.block_diag(parts, format="csr"),
-        np.concatenate(node_rows), np.concatenate(node_columns), np.concatenate(node_labels), np.concatenate(depths), step,
-    )  # fmt: skip
+        np.concatenate(node_rows),
+        np.concatenate(node_columns),
+        np.concatenate(node_labels),
+        np.concatenate(depths),
+        step,
+    )
 
 
 def _hats(

@@ -1,6 +1,7 @@
 r"""Traction from the pixels themselves: integrated digital image correlation with the gel as kinematic basis.
 
-Minimises :math:`\sum (I_s(x + o + G T) - I_r(x))^2 / v` plus the prior by Gauss-Newton (Hild & Roux, Strain 42:69, 2006;
+Minimises :math:`\sum (I_s(x + o + G T) - I_r(x))^2 / v` plus the prior by Gauss-Newton (Hild & Roux, Strain 42:69,
+2006;
 Leclerc et al., LNCS 5496:161, 2009). Every step is the bounded problem of :mod:`tfm.traction.gaussian` with the blocks'
 sensitivity as precision. There is no interrogation window, so a steep gradient under a cell is not blurred.
 """
@@ -49,6 +50,9 @@ __all__ = ["infer_image"]
 #: Coefficients while the images are being aligned; the last steps are taken on finer nodes.
 COARSE = 700
 
+#: Share of quiet ground that may move unexplained (lost beads make some) before the field becomes a caution.
+MOST_STRAY = 0.04
+
 
 @dataclass
 class _Loop:
@@ -89,7 +93,9 @@ class _Loop:
             u[0] += value * (-y if name == "rotation" else x)
             u[1] += value * (x if name == "rotation" else y)
         shift = (self.drift + motion[:2]) / self.pixel
-        fine = [self.up_y @ (u[i] / self.pixel).astype(np.float32) @ self.up_x.T + np.float32(shift[i]) for i in range(2)]
+        fine = [
+            self.up_y @ (u[i] / self.pixel).astype(np.float32) @ self.up_x.T + np.float32(shift[i]) for i in range(2)
+        ]
         return np.stack(fine)
 
 
@@ -102,6 +108,7 @@ class _Step:
     misfit: float
     ring_misfit: float
     ring_bound: float
+    stray: float
     rejected: int
 
 
@@ -112,7 +119,9 @@ def _linearise(
     j, v, s = (loop.blocks.sum(a) for a in (terms.sensitivity, terms.variance, terms.score))
     det = np.maximum(v[0] * v[2] - v[1] ** 2, 0.0)
     filled = (v[0] > 0.02 * np.median(v[0][v[0] > 0])) & (det > 1e-6 * v[0] * v[2])
-    chi = np.where(filled, (v[2] * s[0] ** 2 - 2 * v[1] * s[0] * s[1] + v[0] * s[1] ** 2) / np.where(filled, det, 1.0), 0.0)
+    chi = np.where(
+        filled, (v[2] * s[0] ** 2 - 2 * v[1] * s[0] * s[1] + v[0] * s[1] ** 2) / np.where(filled, det, 1.0), 0.0
+    )
     quiet = filled & loop.quiet
     if quiet.sum() < 30:
         quiet = filled
@@ -120,10 +129,13 @@ def _linearise(
     scale = max(float(np.median(chi[quiet])) / (2.0 * np.log(2.0)), 1e-6)
     kept = filled.copy()
     if robust:
-        # Blocks that no displacement explains (lost beads, dirt); a steep gradient raises all blocks near it, so the bound
+        # Blocks that no displacement explains (lost beads, dirt); a steep gradient raises all blocks near it, so the
+        # bound
         # follows the neighbourhood of the cell.
         near = filled & ~loop.quiet
-        bound = 18.0 * scale * max(1.0, float(np.median(chi[near])) / (2.0 * np.log(2.0) * scale) if near.any() else 1.0)
+        bound = (
+            18.0 * scale * max(1.0, float(np.median(chi[near])) / (2.0 * np.log(2.0) * scale) if near.any() else 1.0)
+        )
         kept &= chi < bound
     # One number turns score and sensitivity into score and information of a likelihood: variance = sensitivity.
     efficiency = float((j[0] + j[2])[kept].sum() / (v[0] + v[2])[kept].sum()) / scale
@@ -143,18 +155,21 @@ def _linearise(
     near = kept & (loop.blocks.distance <= 6e-6 / loop.lattice.spacing)
     used = near if near.sum() > 20 else kept
     misfit = float(chi[used].sum() / (2.0 * used.sum())) / scale
+    # One block in a thousand exceeds 13.8 by chance (chi-square, two degrees of freedom).
+    stray = float(np.mean(chi[quiet] > 13.8 * scale))
     ring = kept & (loop.blocks.distance > 0) & (loop.blocks.distance * loop.lattice.spacing < 4e-6)
     ring_misfit = float(chi[ring].mean() / 2.0) / scale if ring.sum() > 10 else 1.0
     # Half a chi-square of two degrees of freedom has standard deviation 1 per block.
     ring_bound = 1.0 + max(0.5, 5.0 / np.sqrt(max(int(ring.sum()), 1)))
     data = replace(loop.data, value=now + shift * loop.pixel, precision=precision, weighted=weighted)
-    return _Step(data, terms, scale, efficiency, misfit, ring_misfit, ring_bound, int(filled.sum() - kept.sum()))
+    return _Step(data, terms, scale, efficiency, misfit, ring_misfit, ring_bound, stray, int(filled.sum() - kept.sum()))
 
 
 def _positive_part(j: NDArray[np.float64]) -> NDArray[np.float64]:
     """Symmetric 2 x 2 matrices ``(3, N)`` with negative eigenvalues set to 0.
 
-    Where the frames do not match (a block far from its place, no bead) the product of the two gradients scatters around zero.
+    Where the frames do not match (a block far from its place, no bead) the product of the two gradients scatters
+    around zero.
     The score already says so; a negative information would let the traction run away.
     """
     mean, half = 0.5 * (j[0] + j[2]), np.hypot(0.5 * (j[0] - j[2]), j[1])
@@ -219,7 +234,8 @@ def infer_image(
     Returns
     -------
     TractionField
-        With ``misfit`` = chi-square of the blocks under and near the cells per degree of freedom, in units of what quiet
+        With ``misfit`` = chi-square of the blocks under and near the cells per degree of freedom, in units of what
+        quiet
         ground shows.
 
     Raises
@@ -250,30 +266,33 @@ def infer_image(
     step_data, solution = state.step, state.solution
     if step_data is None:
         raise ConvergenceError("the pixel method took no step", code="no-step", remedy="allow at least one step")
-    notes = list(start.notes)
-    if not state.converged:
-        notes.append(
-            f"the pixel method did not settle: the last step moved a dipole by {state.moves[-1]:.2f} of its standard deviation"
-        )
-    if step_data.misfit > 2.0:
-        notes.append(
-            f"the images are not explained under the cell (misfit {step_data.misfit:.1f}, expected 1): check outline, focus and gel"
-        )
-    if step_data.ring_misfit > step_data.ring_bound and step_data.ring_misfit > step_data.misfit:
-        notes.append(
-            f"beads just outside the outline move more than traction inside it explains (misfit {step_data.ring_misfit:.1f}, "
-            "expected 1): adhesions may reach beyond the outline, or a neighbour pulls; draw it wider"
-        )
+    notes = (*start.notes, *_remarks(state, step_data))
     statistics = {
-        "steps": len(state.moves), "converged": state.converged, "last_move_sd": state.moves[-1],
-        "noise_gain": state.noise.gain, "noise_floor": state.noise.floor, "noise_scale": step_data.scale,
-        "efficiency": step_data.efficiency, "blocks_rejected": step_data.rejected, "ring_misfit": step_data.ring_misfit, "bead_sigma_px": state.width, "block_px": b,
+        "steps": len(state.moves),
+        "converged": state.converged,
+        "last_move_sd": state.moves[-1],
+        "noise_gain": state.noise.gain,
+        "noise_floor": state.noise.floor,
+        "noise_scale": step_data.scale,
+        "efficiency": step_data.efficiency,
+        "blocks_rejected": step_data.rejected,
+        "ring_misfit": step_data.ring_misfit,
+        "stray_ground": step_data.stray,
+        "bead_sigma_px": state.width,
+        "block_px": b,
         "seconds": time.perf_counter() - began,
-    }  # fmt: skip
+    }
     return make_result(
-        step_data.data, gel, covered, solution, method="image", misfit=step_data.misfit, cut=cut, notes=tuple(notes),
+        step_data.data,
+        gel,
+        covered,
+        solution,
+        method="image",
+        misfit=step_data.misfit,
+        cut=cut,
+        notes=notes,
         statistics=statistics,
-    )  # fmt: skip
+    )
 
 
 @dataclass(frozen=True)
@@ -288,15 +307,41 @@ class _State:
     converged: bool
 
 
+def _remarks(state: _State, step: _Step) -> list[str]:
+    """What a reader of the table has to know about the fit; every sentence makes the field a caution."""
+    notes = []
+    if not state.converged:
+        notes.append(
+            "the pixel method did not settle: the last step moved a dipole by "
+            f"{state.moves[-1]:.2f} of its standard deviation"
+        )
+    if step.misfit > 2.0:
+        notes.append(
+            f"the images are not explained under the cell (misfit {step.misfit:.1f}, expected 1): "
+            "check outline, focus and gel"
+        )
+    if step.ring_misfit > step.ring_bound and step.ring_misfit > step.misfit:
+        notes.append(
+            f"beads just outside the outline move more than traction inside it explains (misfit {step.ring_misfit:.1f}, "
+            "expected 1): adhesions may reach beyond the outline, or a neighbour pulls; draw it wider"
+        )
+    if step.stray > MOST_STRAY:
+        notes.append(
+            f"{100 * step.stray:.0f} % of the ground far from every outline moves as no outlined cell explains: "
+            "a cell without an outline, debris or a fold; outline it or crop the field"
+        )
+    return notes
+
+
 def _begin(loop: _Loop, begin: LinearData, previous: TractionField | None) -> _State:
     """Start from the frame before where it has the same nodes, else from the vectors."""
     size = 2 * begin.basis.size
-    if previous is not None and previous.solution is not None and previous.data is not None:
-        if previous.solution.mean.size == size and np.array_equal(previous.labels, loop.covered):
-            still = replace(previous.solution, nuisance=np.zeros_like(previous.solution.nuisance))
-            return _State(still, NoiseModel(0.0, 1.0), 1.3, None, (), False)
+    before = None if previous is None or not np.array_equal(previous.labels, loop.covered) else previous.solution
+    if before is not None and before.mean.size == size:
+        still = replace(before, nuisance=np.zeros_like(before.nuisance))
+        return _State(still, NoiseModel(0.0, 1.0), 1.3, None, (), False)
     solution, normal = solve(begin, loop.gel, priors=loop.priors, tolerance=0.3, search=False)
-    # Vectors 16 px apart leave room for any displacement between them: a start must not shift beads further than was seen.
+    # Vectors 16 px apart leave room for any displacement between them: a start must not go further than seen.
     seen = np.hypot(*(begin.value - np.median(begin.value, axis=1, keepdims=True))).max()
     for _ in range(12):
         u = displacement(loop.gel, lattice_traction(loop.data, solution.mean), loop.lattice.spacing, kernel=loop.kernel)
@@ -307,7 +352,8 @@ def _begin(loop: _Loop, begin: LinearData, previous: TractionField | None) -> _S
 
 
 def _carry_over(loop: _Loop, state: _State) -> _State:
-    """The same traction on finer nodes: the prior's strength stays, the posterior is taken anew from the last images."""
+    """The same traction on finer nodes: the prior's strength stays, the posterior is taken anew from the last
+    images."""
     if state.step is None:
         return state
     data = replace(
@@ -329,9 +375,15 @@ def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fi
         u = loop.pixel_displacement(state.solution.mean, state.solution.nuisance, spread)
         # Wide gradients first: they pull a start that is a bead's width away; then about the bead's own width.
         terms = pixel_terms(
-            loop.pair, u[0], u[1], b=loop.b, shape=loop.lattice.shape, smoothing=2.0 if number == 1 else 1.0,
-            noise=state.noise, outlier_sigma=np.inf if number <= 2 else 6.0,
-        )  # fmt: skip
+            loop.pair,
+            u[0],
+            u[1],
+            b=loop.b,
+            shape=loop.lattice.shape,
+            smoothing=2.0 if number == 1 else 1.0,
+            noise=state.noise,
+            outlier_sigma=np.inf if number <= 2 else 6.0,
+        )
         if number == 2:
             state = replace(state, width=bead_width(loop.pair, terms.carried, terms.weight))
         if number <= 4:
@@ -340,9 +392,14 @@ def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fi
         # The prior's strength follows roughly until the displacement has settled, then exactly, lengths included.
         near_end = not fine and len(state.moves) > first and state.moves[-1] < 5.0 * tolerance
         solution, _ = solve(
-            step.data, loop.gel, start=state.solution.components, response=loop.response, priors=loop.priors,
-            tolerance=0.05 if near_end or fine else 0.5, search=near_end,
-        )  # fmt: skip
+            step.data,
+            loop.gel,
+            start=state.solution.components,
+            response=loop.response,
+            priors=loop.priors,
+            tolerance=0.05 if near_end or fine else 0.5,
+            search=near_end,
+        )
         new = functionals @ solution.mean
         sd = np.sqrt(np.einsum("ij,jk,ik->i", functionals, solution.covariance, functionals))
         move = float(np.max(np.abs(new - dipole) / sd))
@@ -354,22 +411,45 @@ def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fi
 
 
 def _make_loop(
-    relaxed: NDArray[np.float32], stressed: NDArray[np.float32], pixel: float, gel: Gel, lattice: Lattice, b: int,
-    covered: NDArray[np.int32], begin: LinearData, drift: NDArray[np.float64],
-) -> _Loop:  # fmt: skip
+    relaxed: NDArray[np.float32],
+    stressed: NDArray[np.float32],
+    pixel: float,
+    gel: Gel,
+    lattice: Lattice,
+    b: int,
+    covered: NDArray[np.int32],
+    begin: LinearData,
+    drift: NDArray[np.float64],
+) -> _Loop:
     blocks = make_blocks(covered > 0, smallest=2, largest=16, ratio=3.0)
     data = replace(
-        begin, rows=blocks.rows, columns=blocks.columns, value=np.zeros((2, blocks.rows.size)),
+        begin,
+        rows=blocks.rows,
+        columns=blocks.columns,
+        value=np.zeros((2, blocks.rows.size)),
         precision=np.zeros((3, blocks.rows.size)),
-    )  # fmt: skip
+    )
     kernel = node_kernel(gel, lattice.shape, lattice.spacing, receiver="point")
     quiet = blocks.distance * lattice.spacing > 8e-6
     return _Loop(
-        prepare_pair(np.asarray(relaxed, np.float32), np.asarray(stressed, np.float32)), lattice, b, pixel, gel, covered, blocks,
-        data, kernel, response_matrix(data, kernel), nuisance_columns(data), drift, quiet,
-        resample_matrix(relaxed.shape[0], lattice.shape[0], b), resample_matrix(relaxed.shape[1], lattice.shape[1], b),
-        _quiet_pixels(covered, lattice, b, relaxed.shape), {},
-    )  # fmt: skip
+        prepare_pair(np.asarray(relaxed, np.float32), np.asarray(stressed, np.float32)),
+        lattice,
+        b,
+        pixel,
+        gel,
+        covered,
+        blocks,
+        data,
+        kernel,
+        response_matrix(data, kernel),
+        nuisance_columns(data),
+        drift,
+        quiet,
+        resample_matrix(relaxed.shape[0], lattice.shape[0], b),
+        resample_matrix(relaxed.shape[1], lattice.shape[1], b),
+        _quiet_pixels(covered, lattice, b, relaxed.shape),
+        {},
+    )
 
 
 def _quiet_pixels(covered: NDArray[np.int32], lattice: Lattice, b: int, shape: tuple[int, int]) -> NDArray[np.bool_]:
@@ -378,9 +458,10 @@ def _quiet_pixels(covered: NDArray[np.int32], lattice: Lattice, b: int, shape: t
         far = covered == 0
     if far.sum() < 20:
         raise MeasurementError(
-            "the outlines leave no ground in the image to measure the noise on", code="no-ground",
+            "the outlines leave no ground in the image to measure the noise on",
+            code="no-ground",
             remedy="image a larger field or draw tighter outlines",
-        )  # fmt: skip
+        )
     rows = np.minimum(np.arange(shape[0]) // b, lattice.shape[0] - 1)
     columns = np.minimum(np.arange(shape[1]) // b, lattice.shape[1] - 1)
     return np.asarray(far[np.ix_(rows, columns)])

@@ -1,9 +1,11 @@
 r"""What is believed of a cell's traction before the beads are seen.
 
 Traction inside one outline is a Matern-3/2 random field (independent for x and y),
-:math:`k(r) = a^2 (1 + \sqrt 3 r/\ell)\exp(-\sqrt 3 r/\ell)` (Rasmussen & Williams, Gaussian Processes for Machine Learning,
+:math:`k(r) = a^2 (1 + \sqrt 3 r/\ell)\exp(-\sqrt 3 r/\ell)` (Rasmussen & Williams, Gaussian Processes for Machine
+Learning,
 2006, eq. 4.17), with its zeroth and first moments **flat**: every dipole is equally likely beforehand, so that a faint
-coherent pull is not drawn towards zero. Dividing a Gaussian :math:`N(T; 0, K)` by the density that it gives to the moments
+coherent pull is not drawn towards zero. Dividing a Gaussian :math:`N(T; 0, K)` by the density that it gives to the
+moments
 :math:`F T` leaves the precision :math:`\Lambda = K^{-1} - F^T (F K F^T)^{-1} F`.
 """
 
@@ -87,8 +89,10 @@ def first_moments(basis: NodeBasis, lattice: Lattice, label: int) -> NDArray[np.
 def shape_weight(depth: NDArray[np.float64], shape: str) -> NDArray[np.float64]:
     """Amplitude of the field against the depth below the rim (m), between 0 and 1.
 
-    ``even`` is 1 everywhere; ``band`` rises from the rim over 0.4 um and falls to a tenth towards the middle, because adhesions
-    gather along the rim (common practice). Neither is true of every cell: results average over both, and their difference
+    ``even`` is 1 everywhere; ``band`` rises from the rim over 0.4 um and falls to a tenth towards the middle, because
+    adhesions
+    gather along the rim (common practice). Neither is true of every cell: results average over both, and their
+    difference
     is part of the error bar.
 
     Examples

@@ -1,6 +1,7 @@
 r"""How strongly to regularise: four published choices of lambda for a diagonalised linear problem.
 
-The problem is :math:`\beta_i = g_i t_i + e_i`, the estimate :math:`t_i = g_i \beta_i/(g_i^2+\lambda^2)`. Lambda has the unit of
+The problem is :math:`\beta_i = g_i t_i + e_i`, the estimate :math:`t_i = g_i \beta_i/(g_i^2+\lambda^2)`. Lambda has
+the unit of
 *g* (m/Pa) everywhere and means: where the response *g* falls below lambda, the prior takes over.
 """
 
@@ -33,12 +34,15 @@ def evidence_score(g: NDArray[np.float64], power: NDArray[np.float64], log_lambd
     weighted = float(np.sum(share * power))
     n = g.size
     if noise is None:
-        return 0.5 * n * np.log(weighted / n) - 0.5 * float(np.sum(np.log(share)))
+        return 0.5 * n * float(np.log(weighted / n)) - 0.5 * float(np.sum(np.log(share)))
     return 0.5 * weighted / noise**2 - 0.5 * float(np.sum(np.log(share)))
 
 
-def lcurve_curvature(g: NDArray[np.float64], power: NDArray[np.float64], log_lambda: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Curvature of log |t| against log |residual| (Hansen & O'Leary, SIAM J Sci Comput 14:1487, 1993); corner = maximum."""
+def lcurve_curvature(
+    g: NDArray[np.float64], power: NDArray[np.float64], log_lambda: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Curvature of log |t| against log |residual| (Hansen & O'Leary, SIAM J Sci Comput 14:1487, 1993); corner =
+    maximum."""
     lam = np.exp(log_lambda)[:, None]
     rho = 0.5 * np.log(np.sum((lam**2 / (g**2 + lam**2)) ** 2 * power, axis=1))
     eta = 0.5 * np.log(np.sum((g / (g**2 + lam**2)) ** 2 * power, axis=1))
@@ -75,11 +79,15 @@ def choose_lambda(
     True
     """
     if choice not in CHOICES:
-        raise InputError(f"lambda choice is '{choice}'", code="unknown-choice", remedy=f"use one of {', '.join(CHOICES)}")
+        raise InputError(
+            f"lambda choice is '{choice}'", code="unknown-choice", remedy=f"use one of {', '.join(CHOICES)}"
+        )
     low, high = np.log(g.max() * 1e-6), np.log(g.max() * 10.0)
     if choice == "discrepancy":
         if noise is None or not noise > 0:
-            raise InputError("the discrepancy principle needs a noise level", code="no-noise", remedy="measure the noise")
+            raise InputError(
+                "the discrepancy principle needs a noise level", code="no-noise", remedy="measure the noise"
+            )
 
         def gap(log_lambda: float) -> float:
             return float(np.sum(_residual_share(g, float(np.exp(log_lambda))) ** 2 * power)) - g.size * noise**2

@@ -44,26 +44,57 @@ def make_result(
     said = list(notes)
     if cut:
         names = ", ".join(str(c) for c in cut)
-        said.append(f"cell {names} is cut by the image's edge or touches one that is: its forces are not balanced inside the image")
+        said.append(
+            f"cell {names} is cut by the image's edge or touches one that is: "
+            "its forces are not balanced inside the image"
+        )
     step_um = basis.step * lattice.spacing * 1e6
     if step_um > 3.0:
-        said.append(f"nodes are {step_um:.1f} um apart, wider than adhesions: fine structure of the traction is not resolved")
+        said.append(
+            f"nodes are {step_um:.1f} um apart, wider than adhesions: fine structure of the traction is not resolved"
+        )
     numbers = {
         "prior": [
-            {"shape": c.shape, "length_um": c.length * 1e6, "amplitude_Pa": c.amplitudes.tolist(), "log_evidence": c.log_evidence}
+            {
+                "shape": c.shape,
+                "length_um": c.length * 1e6,
+                "amplitude_Pa": c.amplitudes.tolist(),
+                "log_evidence": c.log_evidence,
+            }
             for c in solution.components
         ],
         "length_profile": [[shape, length * 1e6, value] for shape, length, value in solution.profile],
-        "log_evidence": solution.log_evidence, "node_spacing_um": step_um, "coefficients": 2 * basis.size,
-        "data": 2 * data.rows.size, "prior_iterations": solution.iterations, "nuisance": list(data.nuisance),
-        "nuisance_values": solution.nuisance.tolist(), **(statistics or {}),
-    }  # fmt: skip
+        "log_evidence": solution.log_evidence,
+        "node_spacing_um": step_um,
+        "coefficients": 2 * basis.size,
+        "data": 2 * data.rows.size,
+        "prior_iterations": solution.iterations,
+        "nuisance": list(data.nuisance),
+        "nuisance_values": solution.nuisance.tolist(),
+        **(statistics or {}),
+    }
     return TractionField(
-        lattice.x, lattice.y, lattice.spacing, traction, displacement(gel, traction, lattice.spacing, kernel=kernel), covered,
-        gel, method,
+        lattice.x,
+        lattice.y,
+        lattice.spacing,
+        traction,
+        displacement(gel, traction, lattice.spacing, kernel=kernel),
+        covered,
+        gel,
+        method,
         Posterior(
-            basis.weights, basis.rows, basis.columns, basis.labels, solution.mean, solution.covariance, solution.log_evidence
+            basis.weights,
+            basis.rows,
+            basis.columns,
+            basis.labels,
+            solution.mean,
+            solution.covariance,
+            solution.log_evidence,
         ),
-        solution.nuisance[:2] if offset_before is None else offset_before, float(misfit),
-        numbers, tuple(said), data=data, solution=solution,
-    )  # fmt: skip
+        solution.nuisance[:2] if offset_before is None else offset_before,
+        float(misfit),
+        numbers,
+        tuple(said),
+        data=data,
+        solution=solution,
+    )

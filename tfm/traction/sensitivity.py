@@ -22,7 +22,9 @@ def solution_with_gel(traction: TractionField, gel: Gel) -> Solution:
         When the traction has no posterior (method ``fourier``).
     """
     if traction.data is None or traction.solution is None:
-        raise InputError("this traction has no posterior", code="no-posterior", remedy="use the method bounded or image")
+        raise InputError(
+            "this traction has no posterior", code="no-posterior", remedy="use the method bounded or image"
+        )
     return fixed_posterior(
         traction.data,
         normal_equations(traction.data, gel),

@@ -1,12 +1,15 @@
-r"""What two bead images say of a displacement: gradient products, their noise, and the score that pulls on the estimate.
+r"""What two bead images say of a displacement: gradient products, their noise, and the score that pulls on the
+estimate.
 
 With :math:`r = I_s(x + u) - I_r(x)` and the gradient :math:`g`, a small error of the assumed displacement changes the
 residual by :math:`g \cdot \delta u` (digital image correlation; Hild & Roux, Strain 42:69, 2006). Per block of pixels
 
-- sensitivity :math:`J = \sum w\, \mathrm{sym}(\hat g_r \otimes g_s)`, a product of gradients of **independent** frames, so that
+- sensitivity :math:`J = \sum w\, \mathrm{sym}(\hat g_r \otimes g_s)`, a product of gradients of **independent**
+  frames, so that
   its expectation carries no noise (the product of one frame's gradient with itself overstates the information);
 - score :math:`s = -\sum w\, \hat g\, r`;
-- variance of the score :math:`V = \sum w^2 v\, \hat g \otimes \hat g`, with ``v`` the noise of the **raw** pixels: interpolation
+- variance of the score :math:`V = \sum w^2 v\, \hat g \otimes \hat g`, with ``v`` the noise of the **raw** pixels:
+  interpolation
   correlates neighbouring residuals without removing noise in the band where the gradients live.
 """
 
@@ -51,7 +54,8 @@ class NoiseModel:
 class FramePair:
     """Two frames ready to be compared.
 
-    ``relaxed`` ``(ny, nx)``, background taken off; ``coefficients`` cubic-spline coefficients of the stressed frame, ditto;
+    ``relaxed`` ``(ny, nx)``, background taken off; ``coefficients`` cubic-spline coefficients of the stressed frame,
+    ditto;
     ``trusted`` masks of usable pixels in each frame as float (1 good, 0 bad).
     """
 
@@ -62,7 +66,8 @@ class FramePair:
     cache: dict[float, tuple[Float32, Float32]] = field(default_factory=dict, compare=False, repr=False)
 
     def relaxed_gradient(self, smoothing: float) -> tuple[Float32, Float32]:
-        """Gradient of the relaxed frame (x, y), smoothed by a Gaussian of so many pixels; kept, as the frame never changes."""
+        """Gradient of the relaxed frame (x, y), smoothed by a Gaussian of so many pixels; kept, as the frame never
+        changes."""
         if smoothing not in self.cache:
             if smoothing == 0.0:
                 self.cache[smoothing] = _gradient(self.relaxed)
@@ -74,10 +79,13 @@ class FramePair:
 
 @dataclass(frozen=True)
 class PixelTerms:
-    """Sums over lattice blocks of ``b x b`` pixels: ``sensitivity`` and ``variance`` ``(3, ny, nx)``, ``score`` ``(2, ny, nx)``.
+    """Sums over lattice blocks of ``b x b`` pixels: ``sensitivity`` and ``variance`` ``(3, ny, nx)``, ``score`` ``(2,
+    ny, nx)``.
 
-    Displacements in these are pixels. ``residual``, ``level`` and ``weight`` ``(NY, NX)`` are per pixel, for the noise fit
-    and the pictures; ``carried`` is the stressed frame carried back to the relaxed one; ``noise_factor`` is the variance of
+    Displacements in these are pixels. ``residual``, ``level`` and ``weight`` ``(NY, NX)`` are per pixel, for the
+    noise fit
+    and the pictures; ``carried`` is the stressed frame carried back to the relaxed one; ``noise_factor`` is the
+    variance of
     ``residual`` in units of one raw pixel's.
     """
 
@@ -101,9 +109,11 @@ def prepare_pair(relaxed: Float32, stressed: Float32, *, background_px: float = 
     """
     if relaxed.shape != stressed.shape:
         raise MeasurementError(
-            f"stressed image is {stressed.shape[1]} x {stressed.shape[0]} px and relaxed {relaxed.shape[1]} x {relaxed.shape[0]} px",
-            code="frames-differ", remedy="use two frames of the same camera region",
-        )  # fmt: skip
+            f"stressed image is {stressed.shape[1]} x {stressed.shape[0]} px "
+            f"and relaxed {relaxed.shape[1]} x {relaxed.shape[0]} px",
+            code="frames-differ",
+            remedy="use two frames of the same camera region",
+        )
     clean, trusted = [], []
     for frame in (relaxed, stressed):
         image = np.asarray(frame, np.float32)
@@ -141,7 +151,8 @@ def prepare_pair(relaxed: Float32, stressed: Float32, *, background_px: float = 
 def bead_width(pair: FramePair, carried: Float32, weight: Float32) -> float:
     """Standard deviation (px) of the beads' image, taken as Gaussian.
 
-    For sparse Gaussian spots sum(I^2) / sum(|grad I|^2) = sigma^2 (elementary integrals); products of two independent frames
+    For sparse Gaussian spots sum(I^2) / sum(|grad I|^2) = sigma^2 (elementary integrals); products of two independent
+    frames
     keep the noise out of both sums.
     """
     gr, gs = _gradient(pair.relaxed), _gradient(carried)
@@ -169,7 +180,8 @@ def rigid_beads(u: NDArray[np.float64], spread: float) -> NDArray[np.float64]:
     Examples
     --------
     >>> linear = np.stack([np.tile(np.arange(6.0), (5, 1)), np.zeros((5, 6))])
-    >>> bool(np.allclose(rigid_beads(linear, 0.5)[:, :, 1:-1], linear[:, :, 1:-1], rtol=1e-12))  # a uniform stretch needs no correction
+    >>> stretched = rigid_beads(linear, 0.5)[:, :, 1:-1]  # a uniform stretch needs no correction
+    >>> bool(np.allclose(stretched, linear[:, :, 1:-1], rtol=1e-12))
     True
     """
     second = np.array([1.0, -2.0, 1.0])
@@ -237,8 +249,10 @@ def _interpolation_noise(shift: Float32) -> Float32:
     impulse = np.zeros(61)
     impulse[30] = 1.0
     c = ndimage.spline_filter1d(impulse, 3, mode="mirror")
-    table = [np.sum(ndimage.map_coordinates(c, [np.arange(5, 56) + f], order=3, prefilter=False) ** 2) for f in fraction]
-    return np.interp(shift - np.floor(shift), fraction, table).astype(np.float32)
+    table = [
+        np.sum(ndimage.map_coordinates(c, [np.arange(5, 56) + f], order=3, prefilter=False) ** 2) for f in fraction
+    ]
+    return np.asarray(np.interp(shift - np.floor(shift), fraction, table), np.float32)
 
 
 def pixel_terms(
@@ -252,7 +266,8 @@ def pixel_terms(
     noise: NoiseModel,
     outlier_sigma: float = 6.0,
 ) -> PixelTerms:
-    """Everything that the two frames say at the assumed displacement ``ux, uy`` (pixels, per pixel of the relaxed frame).
+    """Everything that the two frames say at the assumed displacement ``ux, uy`` (pixels, per pixel of the relaxed
+    frame).
 
     Parameters
     ----------
@@ -264,13 +279,17 @@ def pixel_terms(
     y = np.arange(ny, dtype=np.float32)[:, None] + uy
     inside = (x >= 1.5) & (x <= nx - 2.5) & (y >= 1.5) & (y <= ny - 2.5)
     where = np.stack([y, x])
-    carried = ndimage.map_coordinates(pair.coefficients, where, order=3, prefilter=False, output=np.float32, mode="mirror")
+    carried = ndimage.map_coordinates(
+        pair.coefficients, where, order=3, prefilter=False, output=np.float32, mode="mirror"
+    )
     weight = inside.astype(np.float32)
     weight[:2] = weight[-2:] = weight[:, :2] = weight[:, -2:] = 0.0
     for bad, moved in ((pair.trusted_relaxed, False), (pair.trusted_stressed, True)):
         if bad.min() < 1.0:
             mask = ndimage.minimum_filter(bad, size=5)
-            weight *= ndimage.map_coordinates(mask, where, order=0, output=np.float32, mode="nearest") if moved else mask
+            weight *= (
+                ndimage.map_coordinates(mask, where, order=0, output=np.float32, mode="nearest") if moved else mask
+            )
     ratio = _brightness_ratio(pair.relaxed, carried, weight)
     carried = carried * ratio
     residual = carried - pair.relaxed
@@ -292,11 +311,13 @@ def pixel_terms(
         return np.asarray(tile.sum(axis=(1, 3), dtype=np.float64))
 
     hx, hy = 0.5 * (hr[0] + hs[0]), 0.5 * (hr[1] + hs[1])
-    sensitivity = np.stack([
-        block(0.5 * w * (hr[0] * gs[0] + hs[0] * gr[0])),
-        block(0.25 * w * (hr[0] * gs[1] + hs[0] * gr[1] + hr[1] * gs[0] + hs[1] * gr[0])),
-        block(0.5 * w * (hr[1] * gs[1] + hs[1] * gr[1])),
-    ])  # fmt: skip
+    sensitivity = np.stack(
+        [
+            block(0.5 * w * (hr[0] * gs[0] + hs[0] * gr[0])),
+            block(0.25 * w * (hr[0] * gs[1] + hs[0] * gr[1] + hr[1] * gs[0] + hs[1] * gr[0])),
+            block(0.5 * w * (hr[1] * gs[1] + hs[1] * gr[1])),
+        ]
+    )
     spread = np.stack([block(w * weight * hx * hx), block(w * weight * hx * hy), block(w * weight * hy * hy)])
     score = -np.stack([block(w * hx * residual), block(w * hy * residual)])
     factor = 1.0 + ratio * _interpolation_noise(ux) * _interpolation_noise(uy)
@@ -306,14 +327,17 @@ def pixel_terms(
 def fit_noise(terms: PixelTerms, quiet: NDArray[np.bool_], *, bins: int = 16) -> NoiseModel:
     """Noise of one raw pixel from the residuals on quiet ground, ``variance = gain * level + floor``.
 
-    Residual squares are averaged in bins of the grey level, corrected for the variance that interpolation removes, and a
+    Residual squares are averaged in bins of the grey level, corrected for the variance that interpolation removes,
+    and a
     line with non-negative coefficients is fitted (weights: the bins' own scatter).
     """
     use = quiet & (terms.weight > 0)
     level = np.maximum(terms.level[use], 0.0)
     square = terms.residual[use] ** 2 / terms.noise_factor[use]
     if level.size < 500:
-        raise MeasurementError("too little ground to measure the noise on", code="no-ground", remedy="image a larger field")
+        raise MeasurementError(
+            "too little ground to measure the noise on", code="no-ground", remedy="image a larger field"
+        )
     edges = np.unique(np.quantile(level, np.linspace(0.0, 1.0, bins + 1)))
     which = np.clip(np.searchsorted(edges, level, side="right") - 1, 0, edges.size - 2)
     count = np.bincount(which, minlength=edges.size - 1)
@@ -322,6 +346,8 @@ def fit_noise(terms: PixelTerms, quiet: NDArray[np.bool_], *, bins: int = 16) ->
     good = (count > 30) & (mean_square > 0)
     # Relative errors of the bins: a mean square has relative scatter sqrt(2 / count).
     scale = np.sqrt(count[good]) / mean_square[good]
-    (gain, floor), _ = optimize.nnls(np.stack([mean_level[good], np.ones(good.sum())], axis=1) * scale[:, None], mean_square[good] * scale)
+    (gain, floor), _ = optimize.nnls(
+        np.stack([mean_level[good], np.ones(good.sum())], axis=1) * scale[:, None], mean_square[good] * scale
+    )
     smallest = 1e-3 * float(np.median(mean_square[good])) if good.any() else 1e-6
     return NoiseModel(float(gain), max(float(floor), smallest))
