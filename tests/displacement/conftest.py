@@ -63,8 +63,9 @@ def bump(size: int, peak: float = 4.0, width: float = 25.0) -> Motion:
     return motion
 
 
-def uniform(dx: float, dy: float) -> Motion:
-    return lambda x, y: np.stack([np.full(np.shape(x), dx), np.full(np.shape(x), dy)])
+@pytest.fixture(name="bump")
+def _bump() -> Callable[..., Motion]:
+    return bump
 
 
 @pytest.fixture

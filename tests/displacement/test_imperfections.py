@@ -1,4 +1,5 @@
-"""What real microscopes do: for each imperfection the untreated image gives a wrong answer and the treated one does not."""
+"""What real microscopes do: for each imperfection the untreated image gives a wrong answer and the treated one does
+not."""
 
 from __future__ import annotations
 
@@ -8,7 +9,7 @@ from scipy.ndimage import gaussian_filter
 
 import tfm.displacement.prepare as prepare
 import tfm.displacement.refine as refine
-from tfm.displacement import estimate_drift, measure_displacement
+from tfm.displacement import measure_displacement
 from tfm.displacement.match import BrightnessSums
 from tfm.displacement.prepare import bead_width, prepare_frame, sharpest_plane
 from tfm.displacement.quality import QUALITY_LIMITS, judge_quality
@@ -23,19 +24,22 @@ def judged(pair, quiet, **options):
     return np.sqrt(np.mean(error**2)), z.mean(), field.valid.mean(), field
 
 
-def test_uneven_illumination_and_background(make_pair, quiet) -> None:
-    pair = make_pair(uneven=0.8, camera=Camera(background=150.0), drift=(6.4, -4.3))
+def test_uneven_illumination_and_background(make_pair, quiet, monkeypatch) -> None:
+    """A lamp that falls to a fifth towards the corners, 400 photons of background, beads of 1000 photons, drift."""
+    pair = make_pair(uneven=0.8, camera=Camera(background=400.0), drift=(6.4, -4.3), photons=1000.0)
     rms, z, share, field = judged(pair, quiet)
-    assert rms < 0.13
+    assert rms < 0.12
     assert z < 1.3
     assert share > 0.98
     assert np.abs(field.drift - [6.4, -4.3]).max() < 0.03
-    # Untreated, the lamp's own shape, which stays where it is, correlates with itself at no shift.
-    raw = estimate_drift(pair.relaxed.astype(np.float32), pair.stressed.astype(np.float32), quiet=quiet)
-    assert np.hypot(*(np.array(raw.shift) - [6.4, -4.3])) > 1
+    monkeypatch.setattr(prepare, "_smooth_background", lambda raw: np.zeros(raw.shape, np.float32))
+    bad_rms, bad_z, bad_share, _ = judged(pair, quiet)
+    assert bad_rms > 1.5 * rms
+    assert bad_z > 1.3 * z
+    assert bad_share < 0.97
 
 
-@pytest.mark.parametrize("brightness", [0.5, 1.6])
+@pytest.mark.parametrize("brightness", [0.5, 2.0])
 def test_brightness_change(make_pair, quiet, monkeypatch, brightness: float) -> None:
     pair = make_pair(brightness=brightness)
     rms, z, share, field = judged(pair, quiet)
@@ -49,38 +53,35 @@ def test_brightness_change(make_pair, quiet, monkeypatch, brightness: float) -> 
         bad_rms, _, bad_share, _ = judged(pair, quiet)
     except MeasurementError:
         return
-    assert bad_rms > 2 * rms or bad_share < 0.9
+    assert bad_rms > 1.8 * rms or bad_share < 0.9
 
 
 def test_hot_pixels_do_not_hold_the_displacement(make_pair, quiet, monkeypatch) -> None:
-    pair = make_pair(hot_pixels=0.004, drift=(1.4, 0.7))
+    pair = make_pair(hot_pixels=0.008, drift=(1.4, 0.7))
     rms, z, share, field = judged(pair, quiet)
     assert rms < 0.07
     assert z < 1.3
     assert share > 0.98
-    assert field.settings["quality"]["hot_pixels"] > 200
+    assert field.settings["quality"]["hot_pixels"] > 400
     monkeypatch.setattr(prepare, "_hot_pixels", lambda raw: np.zeros(raw.shape, bool))
     bad_rms, _, bad_share, _ = judged(pair, quiet)
-    assert bad_rms > 3 * rms
+    assert bad_rms > 2.5 * rms
     assert bad_share < share
 
 
 def test_saturated_beads_do_not_spoil_the_error_bar(make_pair, quiet) -> None:
-    z, bad = [], []
-    for seed in range(3):
-        pair = make_pair(photons=2000.0, drift=(0.5, 0.3), seed=seed)
-        for image in (pair.relaxed, pair.stressed):
-            np.minimum(image, 200, out=image)
-        rms, _, _, field = judged(pair, quiet)
-        far = field.valid & (pair.radius(field) > 100)
-        z.append(pair.surprise(field)[far].mean())
-        assert rms < 0.05
-        assert any("saturated" in note for note in field.notes)
-        # Untreated: the plateau has no noise, so the camera looks better than it is.
-        untreated = measure_displacement(pair.relaxed, pair.stressed, 1.0, quiet=quiet, saturation=1e9)
-        bad.append(pair.surprise(untreated)[far].mean())
-    assert np.mean(z) < 1.2
-    assert np.mean(bad) > 1.15 * np.mean(z)
+    """A plateau has no noise: untreated, the camera looks as if photons made none, and the error bars go astray."""
+    pair = make_pair(photons=2000.0, drift=(0.5, 0.3))
+    for image in (pair.relaxed, pair.stressed):
+        np.minimum(image, 160, out=image)
+    rms, z, share, field = judged(pair, quiet)
+    assert share > 0.98
+    assert rms < 0.06
+    assert 0.6 < z < 1.2
+    assert any("saturated" in note for note in field.notes)
+    assert 0.3 < field.settings["camera_noise"][1] < 1.5
+    untreated = measure_displacement(pair.relaxed, pair.stressed, 1.0, quiet=quiet, saturation=1e9)
+    assert untreated.settings["camera_noise"][1] < 0.1
 
 
 def test_lost_and_new_beads(make_pair, quiet, monkeypatch) -> None:

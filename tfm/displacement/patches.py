@@ -178,7 +178,7 @@ class PatchSums:
         trace, det = cov[:, 0, 0] + cov[:, 1, 1], cov[:, 0, 0] * cov[:, 1, 1] - cov[:, 0, 1] ** 2
         worst = 0.5 * trace + np.sqrt(np.maximum(0.25 * trace**2 - det, 0))
         ok &= (det > 0) & (trace > 0) & (worst < 1 / least_information)
-        valid = ok.reshape(shape)
+        valid = ok.reshape(shape) & self._surrounded()
         covariance = np.stack([cov[:, 0, 0], cov[:, 0, 1], cov[:, 1, 1]]).reshape(3, *shape)
         misfit = np.full(shape, np.nan)
         if self.with_covariance:
@@ -190,6 +190,16 @@ class PatchSums:
             np.divide((trace / np.where(ok, det, 1)).reshape(shape), density, out=area, where=valid & (density > 0))
         return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit, area)
 
+
+    def _surrounded(self) -> NDArray[np.bool_]:
+        """Whether the information lies around the node, not to one side of it: a vector there would be extrapolated.
+
+        The centroid of the information may lie 0.45 R off along an axis; at the image's edge, where half of the window
+        is missing, it lies 0.375 R off.
+        """
+        total = self._sum("M", 0, 0, 0) + self._sum("M", 2, 0, 0)
+        lean = [np.abs(self._sum("M", 0, i, j) + self._sum("M", 2, i, j)) for i, j in ((1, 0), (0, 1))]
+        return np.asarray((total > 0) & (lean[0] < 0.45 * total) & (lean[1] < 0.45 * total))
 
     def _density(self) -> NDArray[np.float64]:
         """Information per px^2 around a node, summed over both directions: (mean M)^2 / mean V."""

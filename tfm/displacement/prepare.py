@@ -48,7 +48,7 @@ def prepare_frame(image: NDArray[np.floating], *, saturation: float | None = Non
 
     The background is a low quantile (25 %) of tiles of 48 px, smoothed and spline-interpolated: beads cover less than
     a quarter of the ground in any usable image. Hot pixels stand out from their four neighbours by more than any bead
-    can (a bead's image, even at the resolution limit, puts at least a quarter of its peak into each neighbour);
+    can (a bead as narrow as half a pixel still puts a sixth of its peak into its brightest neighbour);
     saturated pixels are a plateau at the largest value. Hot pixels take no part; saturated ones are kept out of the
     noise and the brightness.
 
@@ -129,7 +129,7 @@ def _hot_pixels(raw: NDArray[np.float32]) -> NDArray[np.bool_]:
     # Scatter of a pixel against its neighbours' mean, where nothing stands out: the noise of the dark ground.
     rough = raw - 0.25 * (up + down + left + right)
     noise = 1.4826 * float(np.median(np.abs(rough[::2, ::2]))) + 1e-6 * abs(level) + 1e-12
-    above = (raw - level > 12 * noise) & (raw - level > 4.5 * np.maximum(highest - level, 2 * noise))
+    above = (raw - level > 12 * noise) & (raw - level > 6 * np.maximum(highest - level, 2 * noise))
     below = (level - raw > 12 * noise) & (raw < lowest - 12 * noise)
     return np.asarray(above | below)
 
