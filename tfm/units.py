@@ -115,18 +115,24 @@ def parse_quantity(text: str, dimension: str, *, header_unit: str = "") -> float
     match = _NUMBER.match(text)
     if match is None:
         raise InputError(
-            f"'{text}' cannot be read as a number with a unit", code="bad-number", remedy=f"write for instance '{example}'"
+            f"'{text}' cannot be read as a number with a unit",
+            code="bad-number",
+            remedy=f"write for instance '{example}'",
         )
     number, unit = float(match.group(1)), match.group(2)
     if unit.startswith(","):
         raise InputError(f"'{text}' has a decimal comma", code="decimal-comma", remedy="write a decimal point")
     if dimension == "dimensionless":
         if unit:
-            raise InputError(f"'{text}' should be a plain number", code="wrong-unit", remedy=f"write for instance {example}")
+            raise InputError(
+                f"'{text}' should be a plain number", code="wrong-unit", remedy=f"write for instance {example}"
+            )
         return number
     if unit and header_unit and normalise_unit(unit) != normalise_unit(header_unit):
         raise InputError(
-            f"'{text}' carries a unit and the header says [{header_unit}]", code="two-units", remedy="keep one of the two"
+            f"'{text}' carries a unit and the header says [{header_unit}]",
+            code="two-units",
+            remedy="keep one of the two",
         )
     if not unit and not header_unit:
         raise InputError(f"'{text}' has no unit", code="bare-number", remedy=f"write for instance '{example}'")

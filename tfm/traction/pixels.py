@@ -341,7 +341,7 @@ def _begin(loop: _Loop, begin: LinearData, previous: TractionField | None) -> _S
         still = replace(before, nuisance=np.zeros_like(before.nuisance))
         return _State(still, NoiseModel(0.0, 1.0), 1.3, None, (), False)
     solution, normal = solve(begin, loop.gel, priors=loop.priors, tolerance=0.3, search=False)
-    # Vectors 16 px apart leave room for any displacement between them: a start must not go further than seen.
+    # Vectors 16 px apart leave room for any displacement between them: a start must not go further.
     seen = np.hypot(*(begin.value - np.median(begin.value, axis=1, keepdims=True))).max()
     for _ in range(12):
         u = displacement(loop.gel, lattice_traction(loop.data, solution.mean), loop.lattice.spacing, kernel=loop.kernel)
