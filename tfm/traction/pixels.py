@@ -322,8 +322,8 @@ def _remarks(state: _State, step: _Step) -> list[str]:
         )
     if step.ring_misfit > step.ring_bound and step.ring_misfit > step.misfit:
         notes.append(
-            "beads just outside the outline move more than traction inside it explains "
-            f"(misfit {step.ring_misfit:.1f}, expected 1): adhesions may reach beyond the outline, or a neighbour pulls; draw it wider"
+            f"beads just outside the outline move unexplained (misfit {step.ring_misfit:.1f}, expected 1): "
+            "adhesions may reach beyond the outline, or a neighbour pulls; draw it wider"
         )
     if step.stray > MOST_STRAY:
         notes.append(
