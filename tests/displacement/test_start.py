@@ -155,3 +155,11 @@ def test_composition_not_addition_at_steep_strain(make_pair) -> None:
     back = map_coordinates(pair.stressed.astype(float), np.nan_to_num(np.stack(at)), order=3, mode="nearest")
     here = map_coordinates(pair.relaxed.astype(float), np.meshgrid(field.y, field.x, indexing="ij"), order=3)
     assert np.corrcoef(back[3:-3, 3:-3].ravel(), here[3:-3, 3:-3].ravel())[0, 1] > 0.99
+
+
+def test_public_names() -> None:
+    import tfm.displacement as room
+
+    assert room.__all__ == sorted(room.__all__, key=lambda name: (not name.isupper(), not name[0].isupper(), name))
+    assert {"measure_displacement", "DisplacementField", "estimate_drift", "piv_start"} <= set(room.__all__)
+    assert all(hasattr(room, name) for name in room.__all__)

@@ -22,7 +22,7 @@ WINDOWS: tuple[tuple[int, float], ...] = ((1, 1.0), (2, 1.25), (2, 1.0), (2, 0.8
 
 #: Squared blur of each window over the squared difference of the first two, where an image says nothing itself: means
 #: over random synthetic adherent cells. Images with a strong pull overrule them.
-_PRIOR = (6.5, 3.4)
+_PRIOR = (7.5, 4.5)
 #: What difference to the sharpest window leaves out, since that window blurs too; share of the last two windows.
 _BEYOND = (1.4, 1.5)
 _SHARPER = (0.6, 0.4)

@@ -3,19 +3,20 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import correlate1d, gaussian_filter, map_coordinates
+from scipy.ndimage import correlate1d, gaussian_filter, map_coordinates, spline_filter1d
 
 __all__ = ["FramePair", "StripInformation", "strip_information"]
 
 #: Derivative of band-limited images, error of sixth order (common practice: central differences of a 7-point stencil).
 _STENCIL = np.array([-1, 9, -45, 0, 45, -9, 1], dtype=np.float32) / 60
 _SECOND = np.array([2, -27, 270, -490, 270, -27, 2], dtype=np.float32) / 180
-_SMOOTH = 1.0
-#: Sum of squares of the smoothed derivative's weights: 1 / (8 pi s^4), times the response of the 3-point difference.
-_KERNEL_POWER = 0.0325
+_SMOOTH = 0.8
+#: Sum of squares of the weights of the 3-point difference of a Gaussian mean of 0.8 px.
+_KERNEL_POWER = 0.0495
 HALO = 6
 
 
@@ -69,7 +70,8 @@ class StripInformation:
     Attributes
     ----------
     information, scatter
-        ``(3, rows, columns)``: xx, xy, yy of M = sum g g^T / var and of the variance of the score.
+        ``(3, rows, columns)``: xx, xy, yy of M = sum g g^T / var and of the variance of the score (the latter, like
+        ``squares``, only of a final sweep).
     pull
         ``(2, rows, columns)``: h = M u - score.
     squares
@@ -108,7 +110,7 @@ def strip_information(
     frames.
 
     Noise is treated as it is. Gradients are noisy, so g g^T of one frame overstates M; a product of the gradients of
-    *different* frames does not, and is symmetrised. The score uses gradients smoothed over 1 px (an instrument in the
+    *different* frames does not, and is symmetrised. The score uses gradients smoothed over 0.8 px (an instrument in the
     sense of estimating equations: it needs no unbiased gradient, only one that is independent of the residual), and its
     variance uses the variance of **raw** pixels: interpolation lowers the variance of a pixel and correlates it with
     its neighbours, and a sum against a smooth gradient sees neither. Noise in the gradient times noise in the residual
@@ -171,14 +173,14 @@ def strip_information(
     m = [weight * 0.5 * (soft_a[p] * other_a[q] + soft_b[p] * other_b[q]) for p, q in ((0, 0), (0, 1), (1, 0), (1, 1))]
     info = [m[0], 0.5 * (m[1] + m[2]), m[3]]
     extra = 0.25 * _KERNEL_POWER * used
-    scatter = [
+    scatter = info if not final else [
         weight * soft_a[0] * soft_b[0] + extra,
         weight * 0.5 * (soft_a[0] * soft_b[1] + soft_b[0] * soft_a[1]),
         weight * soft_a[1] * soft_b[1] + extra,
     ]
     score = [weight * 0.5 * (soft_a[p] + soft_b[p]) * residual for p in (0, 1)]
     pull = [info[0] * u[0] + info[1] * u[1] - score[0], info[1] * u[0] + info[2] * u[1] - score[1]]
-    squares = [weight * residual**2, weight * (var_a + shrink * var_b)]
+    squares = [weight * residual**2, weight * (var_a + shrink * var_b)] if final else [weight, weight]
     return StripInformation(
         information=np.stack([cut(part) for part in info]),
         scatter=np.stack([cut(part) for part in scatter]),
@@ -273,12 +275,11 @@ def _interpolated_variance(
     return np.asarray(factor_y * factor_x, dtype=np.float32)
 
 
+@cache
 def _variance_table(order: int) -> NDArray[np.float32]:
     """Sum of squares of the spline's weights against the fraction of a pixel, in 256 steps."""
     impulse = np.zeros(65)
     impulse[32] = 1
-    from scipy.ndimage import spline_filter1d
-
     coefficients = spline_filter1d(impulse, order)
     fractions = np.arange(257) / 256
     places = np.arange(4, 60)[None, :] + fractions[:, None]

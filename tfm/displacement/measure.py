@@ -90,8 +90,8 @@ def measure_displacement(
     start = _start(a, b, drift, spacing if mode == "start" else 16)
     if mode == "start":
         return _from_start(start, (a, b), pixel_size, quiet, rotation, magnification)
-    beads = bead_count(a)[0] / max(1, int(a.usable.sum()))
-    radius = float(np.clip(0.6 * np.sqrt(_BEADS_PER_WINDOW / max(beads, 1e-9)), 12.0, 40.0))
+    density = bead_count(a)[0]
+    radius = float(np.clip(0.6 * np.sqrt(_BEADS_PER_WINDOW / max(density, 1e-9)), 12.0, 40.0))
     refined = refine_displacement(a, b, start, spacing_px=spacing, radius=radius, quiet=quiet)
     return _from_refined(refined, start, (a, b), pixel_size, quiet, rotation, magnification)
 

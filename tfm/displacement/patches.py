@@ -154,17 +154,20 @@ class PatchSums:
         terms = [(i, j) for degree in range(self.order + 1) for j in range(degree + 1) for i in [degree - j]]
         shape = (len(self.y), len(self.x))
         size, count = 2 * len(terms), shape[0] * shape[1]
-        normal, right = np.zeros((count, size, size)), np.zeros((count, size))
-        spread = np.zeros((count, size, size)) if self.with_covariance else normal
+        # Filled with the patches along the last axis, where writes are contiguous, and turned once.
+        filled, right_side = np.empty((2, size, size, count)), np.empty((size, count))
         for a, (i, j) in enumerate(terms):
             for c in range(2):
-                right[:, 2 * a + c] = self._sum("h", c, i, j).ravel()
+                right_side[2 * a + c] = self._sum("h", c, i, j).ravel()
             for b, (k, m) in enumerate(terms):
                 for c in range(2):
                     for d in range(2):
-                        normal[:, 2 * a + c, 2 * b + d] = self._sum("M", c + d, i + k, j + m).ravel()
+                        filled[0, 2 * a + c, 2 * b + d] = self._sum("M", c + d, i + k, j + m).ravel()
                         if self.with_covariance:
-                            spread[:, 2 * a + c, 2 * b + d] = self._sum("V", c + d, i + k, j + m).ravel()
+                            filled[1, 2 * a + c, 2 * b + d] = self._sum("V", c + d, i + k, j + m).ravel()
+        normal, spread = (np.ascontiguousarray(part.transpose(2, 0, 1)) for part in filled)
+        right = right_side.T
+        del filled
         # Parameters are in px at the window's edge (coordinates are scaled by R). The weak prior (30 px) only keeps
         # empty patches from dividing by nothing.
         normal[:, np.arange(size), np.arange(size)] += 1e-3

@@ -6,7 +6,6 @@ from collections.abc import Mapping
 from dataclasses import asdict, dataclass, field
 
 import numpy as np
-from numpy.typing import NDArray
 from scipy.ndimage import gaussian_filter, maximum_filter
 
 from tfm.displacement.prepare import PreparedFrame, bead_width
@@ -109,8 +108,8 @@ class FieldQuality:
         return {key: value for key, value in asdict(self).items() if key != "notes"}
 
 
-def bead_count(frame: PreparedFrame) -> tuple[int, float, float]:
-    """Number of beads, their median height (counts) and the dark ground's noise (counts).
+def bead_count(frame: PreparedFrame) -> tuple[float, float, float]:
+    """Beads per px^2, their median height (counts) and the dark ground's noise (counts).
 
     A bead is a local maximum of the lightly smoothed frame that stands four standard deviations above the ground.
 
@@ -119,20 +118,25 @@ def bead_count(frame: PreparedFrame) -> tuple[int, float, float]:
     >>> from tfm.displacement.prepare import prepare_frame
     >>> rng = np.random.default_rng(0)
     >>> image = rng.normal(100, 1, (96, 96)); image[10::12, 10::12] += 500
-    >>> bead_count(prepare_frame(gaussian_filter(image, 1.2)))[0]
+    >>> round(96**2 * bead_count(prepare_frame(gaussian_filter(image, 1.2)))[0])
     64
     """
-    smooth = gaussian_filter(frame.image, 0.8)
+    # A quarter of a million pixels hold thousands of beads, enough for a density and two medians.
+    height_px, width_px = frame.image.shape
+    rows = min(height_px, max(64, 262_144 // width_px))
+    part = slice((height_px - rows) // 2, (height_px - rows) // 2 + rows)
+    image, ground = frame.image[part], max(1, int(frame.usable[part].sum()))
+    smooth = gaussian_filter(image, 0.8)
     level = float(np.median(smooth))
     # The lower half of the ground is free of beads; its spread below the median is that of a half normal distribution.
     low = smooth[smooth <= level]
     spread = float(np.sqrt(np.mean((low - level) ** 2))) + 1e-12
     tops = (smooth == maximum_filter(smooth, 3)) & (smooth > level + 4 * spread)
-    rough = frame.image[:, 1:] - frame.image[:, :-1]
+    rough = image[:, 1:] - image[:, :-1]
     dark = (smooth[:, 1:] < level + spread) & (smooth[:, :-1] < level + spread)
     noise = float(np.sqrt(0.5 * np.mean(rough[dark] ** 2))) if dark.any() else float("nan")
-    height = float(np.median(frame.image[tops])) if tops.any() else float("nan")
-    return int(tops.sum()), height, noise
+    height = float(np.median(image[tops])) if tops.any() else float("nan")
+    return float(tops.sum()) / ground, height, noise
 
 
 def judge_quality(
@@ -143,7 +147,6 @@ def judge_quality(
     rejected_share: float,
     drift_px: float,
     lost_share: float = float("nan"),
-    overlap: NDArray[np.bool_] | None = None,
 ) -> FieldQuality:
     """Quality of one field.
 
@@ -153,13 +156,9 @@ def judge_quality(
         Prepared frames.
     noise_px, rejected_share, drift_px, lost_share
         What the measurement found.
-    overlap
-        Not measured ground may be left out of the bead density.
     """
-    (count, height, noise), (_, height_s, noise_s) = bead_count(relaxed), bead_count(stressed)
-    ground = int(relaxed.usable.sum() if overlap is None else (relaxed.usable & overlap).sum())
+    (density, height, noise), (_, height_s, noise_s) = bead_count(relaxed), bead_count(stressed)
     width, width_s = (bead_width(frame.image, frame.usable) for frame in (relaxed, stressed))
-    density = count / max(1, ground)
     values = {
         "noise_px": noise_px,
         "beads_per_window": density * 1024,
