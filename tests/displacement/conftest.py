@@ -128,4 +128,3 @@ def openpiv_windef() -> Callable[..., tuple[Array, Array, Array]]:
         return x[0] - 0.5, y[:, 0] - 0.5, np.stack([np.ma.filled(u, np.nan), np.ma.filled(v, np.nan)])
 
     return passes
-

@@ -173,11 +173,15 @@ def strip_information(
     m = [weight * 0.5 * (soft_a[p] * other_a[q] + soft_b[p] * other_b[q]) for p, q in ((0, 0), (0, 1), (1, 0), (1, 1))]
     info = [m[0], 0.5 * (m[1] + m[2]), m[3]]
     extra = 0.25 * _KERNEL_POWER * used
-    scatter = info if not final else [
-        weight * soft_a[0] * soft_b[0] + extra,
-        weight * 0.5 * (soft_a[0] * soft_b[1] + soft_b[0] * soft_a[1]),
-        weight * soft_a[1] * soft_b[1] + extra,
-    ]
+    scatter = (
+        info
+        if not final
+        else [
+            weight * soft_a[0] * soft_b[0] + extra,
+            weight * 0.5 * (soft_a[0] * soft_b[1] + soft_b[0] * soft_a[1]),
+            weight * soft_a[1] * soft_b[1] + extra,
+        ]
+    )
     score = [weight * 0.5 * (soft_a[p] + soft_b[p]) * residual for p in (0, 1)]
     pull = [info[0] * u[0] + info[1] * u[1] - score[0], info[1] * u[0] + info[2] * u[1] - score[1]]
     squares = [weight * residual**2, weight * (var_a + shrink * var_b)] if final else [weight, weight]
@@ -265,9 +269,7 @@ def _stray(
     return np.asarray(gaussian_filter(spots.astype(np.float32), 1.5, truncate=2) > 0.02)
 
 
-def _interpolated_variance(
-    at_y: NDArray[np.float32], at_x: NDArray[np.float32], order: int
-) -> NDArray[np.float32]:
+def _interpolated_variance(at_y: NDArray[np.float32], at_x: NDArray[np.float32], order: int) -> NDArray[np.float32]:
     """Variance of an interpolated pixel over that of a raw one."""
     table = _variance_table(order)
     factor_y = table[(256 * (at_y - np.floor(at_y))).astype(np.intp)]

@@ -193,7 +193,6 @@ class PatchSums:
             np.divide((trace / np.where(ok, det, 1)).reshape(shape), density, out=area, where=valid & (density > 0))
         return Patches(np.where(valid, u, np.nan), np.where(valid, covariance, np.nan), valid, misfit, area)
 
-
     def _surrounded(self) -> NDArray[np.bool_]:
         """Whether the information lies around the node, not to one side of it: a vector there would be extrapolated.
 

@@ -178,9 +178,7 @@ def bead_width(image: NDArray[np.float32], usable: NDArray[np.bool_] | None = No
     a = image - float(np.mean(image))
     if usable is not None:
         a = np.where(usable, a, 0)
-    lags = [
-        0.5 * (float(np.mean(a[:, lag:] * a[:, :-lag])) + float(np.mean(a[lag:] * a[:-lag]))) for lag in (1, 2)
-    ]
+    lags = [0.5 * (float(np.mean(a[:, lag:] * a[:, :-lag])) + float(np.mean(a[lag:] * a[:-lag]))) for lag in (1, 2)]
     if lags[1] <= 0 or lags[0] <= lags[1]:
         return float("nan")
     return float(np.sqrt(0.75 / np.log(lags[0] / lags[1])))

@@ -192,9 +192,7 @@ def _sweep(
         used += int(strip.used.sum())
         ground = honest if quiet is None else honest & quiet[first:last]
         pick = ground[::thin, ::thin]
-        samples.append(
-            np.stack([part[::thin, ::thin][pick] for part in (strip.residual, strip.units, strip.level)])
-        )
+        samples.append(np.stack([part[::thin, ::thin][pick] for part in (strip.residual, strip.units, strip.level)]))
     residual, units, level = np.concatenate(samples, axis=1)
     variance = camera_noise(residual, units, level) if residual.size > 2000 else pair.variance
     # Half the variance of the darkest ground: what falls below is a fault of the straight line, not a better pixel.
@@ -205,9 +203,7 @@ def _sweep(
                   lost / max(1, used + lost))  # fmt: skip
 
 
-def _step(
-    before: _Nodes, found: Patches, x: NDArray[np.float64], y: NDArray[np.float64]
-) -> tuple[_Nodes, float]:
+def _step(before: _Nodes, found: Patches, x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[_Nodes, float]:
     """The next field, and the distance that 98 % of its nodes stay below.
 
     A node moves at most one pixel, about a bead's width, beyond which a linear step means nothing; a node without an
@@ -221,9 +217,7 @@ def _step(
     return _Nodes(x, y, old + step), float(np.quantile(settled, 0.98)) if settled.size else 0.0
 
 
-def _within_reach(
-    patches: Patches, nodes: _Nodes, x: NDArray[np.float64], y: NDArray[np.float64]
-) -> Patches:
+def _within_reach(patches: Patches, nodes: _Nodes, x: NDArray[np.float64], y: NDArray[np.float64]) -> Patches:
     """Patches whose last step was longer than a linear step can be are not valid: they have not converged."""
     old = to_pixels(nodes.u, spline_matrix(nodes.y, y), spline_matrix(nodes.x, x))
     valid = patches.valid & (np.hypot(*np.nan_to_num(patches.u - old, nan=np.inf)) < _LONGEST_STEP)
