@@ -206,7 +206,12 @@ def _weigh(precision: NDArray[np.float64], block: NDArray[np.float64]) -> NDArra
     n = precision.shape[1]
     tail = (slice(None),) + (None,) * (block.ndim - 1)
     pxx, pxy, pyy = (precision[i][tail] for i in range(3))
-    return np.concatenate([pxx * block[:n] + pxy * block[n:], pxy * block[:n] + pyy * block[n:]])
+    out = np.empty_like(block)
+    np.multiply(pxx, block[:n], out=out[:n])
+    np.multiply(pyy, block[n:], out=out[n:])
+    out[:n] += pxy * block[n:]
+    out[n:] += pxy * block[:n]
+    return out
 
 
 def balance_rows(basis: NodeBasis, lattice: Lattice, groups: Sequence[Sequence[int]]) -> NDArray[np.float64]:

@@ -22,6 +22,7 @@ from tfm.images.model import Outlines
 from tfm.traction.blocks import Blocks, make_blocks
 from tfm.traction.bounded import choose_step, solve, vector_data, whole_groups
 from tfm.traction.gaussian import (
+    Component,
     LinearData,
     Solution,
     fixed_posterior,
@@ -31,7 +32,7 @@ from tfm.traction.gaussian import (
 )
 from tfm.traction.lattice import Lattice, cover_outlines, image_lattice, make_nodes
 from tfm.traction.model import TractionField
-from tfm.traction.prior import CellPrior
+from tfm.traction.prior import SHAPES, CellPrior
 from tfm.traction.result import lattice_traction, make_result
 from tfm.traction.warp import (
     FramePair,
@@ -360,8 +361,15 @@ def _carry_over(loop: _Loop, state: _State) -> _State:
         loop.data, value=state.step.data.value, precision=state.step.data.precision, weighted=state.step.data.weighted
     )
     normal = normal_equations(data, loop.gel, response=loop.response)
-    solution = fixed_posterior(data, normal, state.solution.components, priors=loop.priors)
+    solution = fixed_posterior(data, normal, _every_shape(state.solution.components), priors=loop.priors)
     return replace(state, solution=solution, moves=(*state.moves, np.inf))
+
+
+def _every_shape(components: tuple[Component, ...]) -> tuple[Component, ...]:
+    """One component per shape of the prior: while the images are being aligned, one shape alone is carried along."""
+    if len(components) == len(SHAPES):
+        return components
+    return tuple(replace(components[-1], shape=shape, weight=1.0 / len(SHAPES)) for shape in SHAPES)
 
 
 def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fine: bool) -> _State:
@@ -394,7 +402,7 @@ def _settle(loop: _Loop, state: _State, *, tolerance: float, most_steps: int, fi
         solution, _ = solve(
             step.data,
             loop.gel,
-            start=state.solution.components,
+            start=_every_shape(state.solution.components) if near_end or fine else state.solution.components[-1:],
             response=loop.response,
             priors=loop.priors,
             tolerance=0.05 if near_end or fine else 0.5,
