@@ -26,9 +26,9 @@ __all__ = ["cell_dipoles", "dipole_functionals"]
 
 
 def dipole_functionals(traction: TractionField, label: int, centroid: NDArray[np.float64]) -> NDArray[np.float64]:
-    """``(5, 2 n)``: dipole xx, xy, yy (N m per Pa), then torque about the centroid; last row unused when no posterior.
+    """Functionals of the coefficients about a point, ``(5, 2 n)`` in N m per Pa; no columns without a posterior.
 
-    Rows: symmetric dipole xx, xy, yy; torque (N m per Pa); trace.
+    Rows: symmetric dipole xx, xy, yy; torque from +x towards +y; trace xx + yy.
     """
     p = traction.posterior
     if p is None:

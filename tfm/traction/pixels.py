@@ -32,7 +32,7 @@ from tfm.traction.gaussian import (
 )
 from tfm.traction.lattice import Lattice, cover_outlines, image_lattice, make_nodes
 from tfm.traction.model import TractionField
-from tfm.traction.prior import SHAPES, CellPrior
+from tfm.traction.prior import SHAPES, CellPrior, first_moments
 from tfm.traction.result import lattice_traction, make_result
 from tfm.traction.warp import (
     FramePair,
@@ -184,17 +184,14 @@ def _positive_part(j: NDArray[np.float64]) -> NDArray[np.float64]:
 
 def _dipole_rows(data: LinearData) -> NDArray[np.float64]:
     """``(3 n_cells, 2 n)``: xx, xy, yy of every cell's dipole as functionals of the coefficients (N m per Pa)."""
-    basis, lattice, n = data.basis, data.lattice, data.basis.size
-    rows = []
-    for label in np.unique(basis.labels):
-        cells = basis.labels == label
-        weights = basis.weights[cells]
-        x, y = lattice.x[basis.columns[cells]], lattice.y[basis.rows[cells]]
-        mx = weights.T @ (x - x.mean()) * lattice.spacing**2
-        my = weights.T @ (y - y.mean()) * lattice.spacing**2
-        zero = np.zeros(n)
-        rows += [np.concatenate([mx, zero]), 0.5 * np.concatenate([my, mx]), np.concatenate([zero, my])]
-    return np.stack(rows)
+    basis = data.basis
+    labels = np.unique(basis.labels)
+    rows = np.zeros((3 * labels.size, 2 * basis.size))
+    for i, label in enumerate(labels):
+        _, _, x_tx, y_tx, x_ty, y_ty = first_moments(basis, data.lattice, int(label))
+        own = np.tile(basis.node_labels == label, 2)
+        rows[3 * i : 3 * i + 3, own] = np.stack([x_tx, 0.5 * (y_tx + x_ty), y_ty])
+    return rows
 
 
 def infer_image(
